@@ -1,0 +1,51 @@
+"""Single stars that cross micro-caustics behind galaxy clusters: from light curves to radii, verdicts and plans.
+
+Everything public can be imported from here; a name loads its layer when it is first used.
+"""
+
+from __future__ import annotations
+
+from importlib import import_module
+from typing import Any
+
+_HOME = {
+    # files
+    "read_event": "crossing.event",
+    "read_lightcurve": "crossing.photometry",
+    # optics
+    "LocalLens": "crossing.optics.local",
+    "effective_velocity": "crossing.optics.motion",
+    "einstein_radius": "crossing.optics.scales",
+    "fold_magnification": "crossing.optics.fold",
+    # inference
+    "FitPriors": "crossing.inference",
+    "fit_crossing": "crossing.inference",
+    # errors
+    "CrossingError": "crossing.errors",
+    "InputError": "crossing.errors",
+}
+
+__all__ = [
+    "CrossingError",
+    "FitPriors",
+    "InputError",
+    "LocalLens",
+    "effective_velocity",
+    "einstein_radius",
+    "fit_crossing",
+    "fold_magnification",
+    "read_event",
+    "read_lightcurve",
+]
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOME:
+        value = getattr(import_module(_HOME[name]), name)
+        globals()[name] = value
+        return value
+    raise AttributeError(f"module 'crossing' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted([*globals(), *__all__])

@@ -1,0 +1,1 @@
+"""Closed forms of lensing: scales, motion, the local macro lens, fold and point-lens magnification."""

@@ -1,0 +1,1 @@
+"""Figures and texts of results: reads them, computes nothing."""

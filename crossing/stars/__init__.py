@@ -1,0 +1,1 @@
+"""Stars as sources: photospheres, limb darkening, extinction."""
