@@ -9,7 +9,7 @@ class CrossingError(Exception):
     """Base of every error that the package raises on purpose."""
 
 
-class InputError(CrossingError):
+class InputError(CrossingError, ValueError):
     """Something that the user gave cannot be used; the command line answers with exit status 2.
 
     Parameters
@@ -23,7 +23,8 @@ class InputError(CrossingError):
 
     Notes
     -----
-    ``str(error)`` is always a single line: ``source: where: problem``.
+    ``str(error)`` is always a single line: ``source: where: problem``. It is a `ValueError` as well, because bad
+    arguments of functions raise it: an ``except ValueError`` around checks of our own must let it pass.
     """
 
     def __init__(self, problem: str, *, source: object | None = None, where: str | None = None) -> None:

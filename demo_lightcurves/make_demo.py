@@ -23,7 +23,7 @@ HERE = Path(__file__).parent
 SEED = 20260
 START = 61000.0
 Z_LENS, Z_SOURCE = 0.43, 1.21
-BANDS = {"blue": (0.87, 0.22, 28.6), "green": (1.15, 0.26, 28.7), "red": (1.54, 0.30, 28.5)}
+BANDS = {"short": (0.87, 0.22, 28.6), "middle": (1.15, 0.26, 28.7), "long": (1.54, 0.30, 28.5)}
 """Pivot wavelength and width [um], and 5-sigma depth of a visit [AB mag]."""
 LIMB = 0.35
 NOTE = "invented for demonstration; no real cluster, arc, star or survey"
@@ -118,7 +118,7 @@ def observe(rng, rows: Rows, time: float, band: str, flux: float) -> None:
 
 
 def write(
-    name: str, title: str, rows: Rows, truth: dict, *, file: str, photometry: str, bands: str = "blue green"
+    name: str, title: str, rows: Rows, truth: dict, *, file: str, photometry: str, bands: str = "short middle"
 ) -> None:
     """Write the event file, its light curve and its truth."""
     lines = [SCENE.format(name=name, title=title)]
@@ -169,7 +169,7 @@ def well_sampled(rng) -> None:
     rows = Rows()
     epochs = np.concatenate([np.arange(0.0, 12.0, 1.5), np.arange(12.0, 23.0, 0.75), np.arange(23.0, 40.0, 2.4)])
     for epoch in epochs[:30]:
-        for k, band in enumerate(("blue", "green")):
+        for k, band in enumerate(("short", "middle")):
             time = epoch + 0.02 * k + rng.uniform(-0.1, 0.1)
             observe(rng, rows, START + time, band, 9.0 + fold(star, band, time, caustic, -1))
     write(
@@ -187,7 +187,7 @@ def four_epochs(rng) -> None:
     star, caustic = Star(radius=110.0, temperature=15000.0, speed=620.0, peak=3300.0), 9.2
     rows = Rows()
     for epoch in (0.0, 8.4, 10.9, 17.0):
-        for k, band in enumerate(("blue", "red")):
+        for k, band in enumerate(("short", "long")):
             time = epoch + 0.03 * k
             observe(rng, rows, START + time, band, fold(star, band, time, caustic, 1))
     write(
@@ -197,7 +197,7 @@ def four_epochs(rng) -> None:
         star_truth(star, caustic, 1),
         file="four_epochs.csv",
         photometry='kind = "flux"\n',
-        bands="blue red",
+        bands="short long",
     )
 
 
@@ -206,7 +206,7 @@ def pair(rng) -> None:
     star, first, second, ratio = Star(radius=140.0, temperature=11000.0, speed=900.0, peak=3000.0), 8.5, 27.5, 0.7
     rows = Rows()
     for epoch in np.arange(0.0, 40.0, 1.3):
-        for k, band in enumerate(("green", "red")):
+        for k, band in enumerate(("middle", "long")):
             time = epoch + 0.02 * k + rng.uniform(-0.2, 0.2)
             share = (time - first) / (second - first)
             flux = fold(star, band, time, first, 1) * np.sqrt(np.clip(1 - share, 0, 1))
@@ -224,7 +224,7 @@ def pair(rng) -> None:
         truth,
         file="pair.fits",
         photometry='kind = "flux"\n',
-        bands="green red",
+        bands="middle long",
     )
 
 
@@ -232,10 +232,10 @@ def difference(rng) -> None:
     """Difference fluxes against a reference that holds the declining star: negative before the rise, with limits."""
     star, caustic = Star(radius=210.0, temperature=9000.0, speed=700.0, peak=2100.0), 24.0
     reference, rows = (26.0, 27.0, 28.0), Rows()
-    share = {band: noise(band) / np.sqrt(3.0) for band in ("blue", "green")}
+    share = {band: noise(band) / np.sqrt(3.0) for band in ("short", "middle")}
     common = {band: share[band] * rng.standard_normal() for band in share}
     for epoch in np.arange(0.0, 60.0, 2.6):
-        for k, band in enumerate(("blue", "green")):
+        for k, band in enumerate(("short", "middle")):
             time = epoch + 0.02 * k + rng.uniform(-0.3, 0.3)
             level = np.mean([fold(star, band, when, caustic, 1) for when in reference])
             sigma = noise(band) * rng.uniform(0.9, 1.2)
@@ -261,19 +261,19 @@ def impostor(rng) -> None:
     """Not a crossing: rises in a fortnight, fades and reddens like a supernova."""
     rows = Rows()
     for epoch in np.arange(0.0, 90.0, 5.0):
-        for k, band in enumerate(("blue", "red")):
+        for k, band in enumerate(("short", "long")):
             time = epoch + 0.02 * k + rng.uniform(-0.4, 0.4)
-            fall = {"blue": 24.0, "red": 46.0}[band]
+            fall = {"short": 24.0, "long": 46.0}[band]
             shape = np.exp(-(time - 22.0) / fall) / (1 + np.exp(-(time - 22.0) / 5.5))
-            observe(rng, rows, START + time, band, {"blue": 75.0, "red": 95.0}[band] * shape)
+            observe(rng, rows, START + time, band, {"short": 75.0, "long": 95.0}[band] * shape)
     write(
         "impostor",
         "Lantern arc, knot 9",
         rows,
-        {"model": "supernova-like transient (Bazin et al. 2009 shape)", "fall_days": {"blue": 24.0, "red": 46.0}},
+        {"model": "supernova-like transient (Bazin et al. 2009 shape)", "fall_days": {"short": 24.0, "long": 46.0}},
         file="impostor.ecsv",
         photometry='kind = "flux"\n',
-        bands="blue red",
+        bands="short long",
     )
 
 
@@ -282,7 +282,7 @@ def faint(rng) -> None:
     star, caustic = Star(radius=60.0, temperature=14000.0, speed=500.0, peak=4600.0), 12.0
     rows = Rows()
     for epoch in np.arange(0.0, 30.0, 4.0):
-        for k, band in enumerate(("blue", "green")):
+        for k, band in enumerate(("short", "middle")):
             time = epoch + 0.02 * k + rng.uniform(-0.3, 0.3)
             observe(rng, rows, START + time, band, fold(star, band, time, caustic, -1))
     write(

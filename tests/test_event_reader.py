@@ -109,7 +109,7 @@ kind = "difference"
 reference_epochs = [59000, 59010.5]
 reference_err = "3 nJy"
 limit_sigma = 3
-columns = {time = "MJD", flux_err = "e_flux"}
+columns = {time = "MJD", flux_err = "e_flux", excluded = "bad", limit_sigma = "n_sigma"}
 
 [counterpart]
 limit = "23.9 mag"
@@ -196,7 +196,7 @@ def test_every_section_of_a_full_file(tmp_path):
             reference_epochs=(59000.0, 59010.5),
             reference_err=3.0,
             limit_sigma=3.0,
-            columns={"time": "MJD", "flux_err": "e_flux"},
+            columns={"time": "MJD", "flux_err": "e_flux", "excluded": "bad", "limit_sigma": "n_sigma"},
         ),
     )
     assert event.counterpart == CounterpartRecord(limit=pytest.approx(1000.0), band="i", earlier=(57000.25,))

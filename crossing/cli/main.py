@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import io
 import os
 import sys
 import traceback
@@ -21,6 +22,9 @@ _VERBS = {
     "fit": ("crossing.cli.fit", "fit a caustic crossing to a light curve: radius, temperature, luminosity"),
 }
 
+# Read by linear-algebra libraries when they are loaded, which no verb has done before it runs.
+_THREAD_VARIABLES = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+
 _DESCRIPTION = (
     "Single stars that cross micro-caustics behind galaxy clusters. Exit status: 0 done; 2 bad input; "
     "3 done, but the result is flagged as not to be trusted; 1 a fault of the program; 130 interrupted."
@@ -28,18 +32,25 @@ _DESCRIPTION = (
 
 
 class _Parser(argparse.ArgumentParser):
-    """Argument parser whose errors are a single line."""
+    """Argument parser whose errors are a single line, and whose help starts with examples where there are some."""
+
+    def format_help(self) -> str:
+        usage, text = self.format_usage(), super().format_help()
+        head, _, rest = text.removeprefix(usage).lstrip().partition("\n\n")
+        return f"{head}\n\n{usage}\n{rest}" if head.startswith("examples:") else text
 
     def error(self, message: str) -> NoReturn:
         self.exit(INVALID, f"{self.prog}: {' '.join(message.split())}; see {self.prog} --help\n")
 
 
 def _parser(verb: str | None) -> argparse.ArgumentParser:
-    parser = _Parser(prog="crossing", description=_DESCRIPTION)
+    parser = _Parser(prog="crossing", description=_DESCRIPTION, allow_abbrev=False)
     parser.add_argument("--version", action="store_true", help="print the version and stop")
     verbs = parser.add_subparsers(dest="verb", metavar="VERB", parser_class=_Parser)
     for name, (module, summary) in _VERBS.items():
-        child = verbs.add_parser(name, help=summary, formatter_class=argparse.RawDescriptionHelpFormatter)
+        child = verbs.add_parser(
+            name, help=summary, formatter_class=argparse.RawDescriptionHelpFormatter, allow_abbrev=False
+        )
         if name == verb:
             import_module(module).add_arguments(child)
     return parser
@@ -79,6 +90,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
 def _run(options: argparse.Namespace) -> int:
     from crossing.progress import quiet
 
+    if options.threads is not None:
+        os.environ.update(dict.fromkeys(_THREAD_VARIABLES, str(options.threads)))
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(errors="backslashreplace")  # names from files on terminals that cannot show them
     try:
         with quiet(options.quiet):
             status = int(import_module(_VERBS[options.verb][0]).run(options))

@@ -27,7 +27,7 @@ def add_shared(parser: argparse.ArgumentParser, verb: str) -> None:
         Its name, for the default output folder.
     """
     group = parser.add_argument_group("shared options")
-    group.add_argument("--out", type=Path, metavar="DIR", help=f"folder for the output files (default: NAME_{verb})")
+    group.add_argument("--out", type=_folder, metavar="DIR", help=f"folder for the output files (default: NAME_{verb})")
     group.add_argument("--seed", type=_count, default=0, metavar="N", help="seed of the random numbers (default: 0)")
     group.add_argument("--json", action="store_true", help="print one JSON document on standard output, and no more")
     group.add_argument("--quiet", action="store_true", help="no progress, no summary")
@@ -35,18 +35,24 @@ def add_shared(parser: argparse.ArgumentParser, verb: str) -> None:
     group.add_argument("--overwrite", action="store_true", help="replace files that this command did not write")
 
 
+def _folder(text: str) -> Path:
+    if not text.strip():
+        raise argparse.ArgumentTypeError("must be the name of a folder, got nothing")
+    return Path(text)
+
+
 def _count(text: str) -> int:
-    value = int(text)
-    if value < 0:
-        raise argparse.ArgumentTypeError(f"must be 0 or more, got {value}")
-    return value
+    return _whole(text, 0)
 
 
 def _positive(text: str) -> int:
-    value = int(text)
-    if value < 1:
-        raise argparse.ArgumentTypeError(f"must be 1 or more, got {value}")
-    return value
+    return _whole(text, 1)
+
+
+def _whole(text: str, least: int) -> int:
+    if not (text.isascii() and text.isdigit() and len(text) < 40 and int(text) >= least):
+        raise argparse.ArgumentTypeError(f"must be a whole number, {least} or more, got {text[:40]!r}")
+    return int(text)
 
 
 def out_folder(options: argparse.Namespace, verb: str) -> Path:
@@ -56,8 +62,8 @@ def out_folder(options: argparse.Namespace, verb: str) -> Path:
 
 
 def json_text(document: Any) -> str:
-    """Strict JSON: numbers that are not finite become null."""
-    return json.dumps(_finite(document), indent=2, allow_nan=False, ensure_ascii=False)
+    """Strict JSON: numbers that are not finite become null; ASCII, so that every terminal can print it."""
+    return json.dumps(_finite(document), indent=2, allow_nan=False)
 
 
 def _finite(item: Any) -> Any:

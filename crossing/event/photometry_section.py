@@ -12,8 +12,9 @@ from crossing.event.tables import Table
 
 __all__ = ["read_counterpart", "read_photometry_tables"]
 
-_FLUX_COLUMNS: Final = ("time", "band", "flux", "flux_err", "is_upper_limit")
-_MAGNITUDE_COLUMNS: Final = ("time", "band", "mag", "mag_err", "is_upper_limit")
+_OPTIONAL_COLUMNS: Final = ("is_upper_limit", "excluded", "limit_sigma")
+_FLUX_COLUMNS: Final = ("time", "band", "flux", "flux_err", *_OPTIONAL_COLUMNS)
+_MAGNITUDE_COLUMNS: Final = ("time", "band", "mag", "mag_err", *_OPTIONAL_COLUMNS)
 
 
 def read_photometry_tables(root: Table) -> tuple[PhotometryRecord, ...]:

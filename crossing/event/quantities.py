@@ -15,6 +15,7 @@ from crossing.errors import InputError
 from crossing.event.wording import describe
 
 __all__ = [
+    "AB_ZERO_POINT",
     "ANGLE",
     "DEGREES",
     "DIMENSIONLESS",
@@ -35,8 +36,8 @@ __all__ = [
     "Measure",
 ]
 
-# 1 uJy is 23.9 mag AB (Oke & Gunn 1983: m = -2.5 log10(f / erg s-1 cm-2 Hz-1) - 48.60), so 1 nJy is 31.4.
-_AB_ZERO_NJY: Final = 31.4
+AB_ZERO_POINT: Final = 31.4
+"""AB magnitude of 1 nJy, from m = -2.5 log10(F / (erg/s/cm2/Hz)) - 48.6 (Oke & Gunn 1983, ApJ 266, 713)."""
 _QUANTITY = re.compile(r"([+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?)\s*(.*)", re.DOTALL)
 # A unit that starts with a number is a slip such as "1 2 um"; only "0.5 1/arcsec" makes sense.
 _STRAY_NUMBER = re.compile(r"(?!1\s*/)[0-9.,]")
@@ -124,7 +125,7 @@ def _finite(raw: float) -> float:
 def _njy_from_ab(magnitude: float) -> float:
     if abs(magnitude) > 100:
         raise InputError(f"must be an AB magnitude between -100 and 100, got {magnitude:g} mag")
-    return float(10.0 ** (0.4 * (_AB_ZERO_NJY - magnitude)))
+    return float(10.0 ** (0.4 * (AB_ZERO_POINT - magnitude)))
 
 
 DIMENSIONLESS: Final = Measure(unit="", example="0.7")

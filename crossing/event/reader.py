@@ -168,6 +168,8 @@ def _read_bytes(path: Path) -> bytes:
             raise InputError("must be a regular file, got a folder or a device; give a TOML file", source=path)
         with path.open("rb") as handle:
             raw = handle.read(_LARGEST + 1)
+    except InputError:
+        raise
     except FileNotFoundError:
         raise InputError("must exist, got no such file; check the path", source=path) from None
     except (OSError, ValueError) as error:  # ValueError: a path with a null character

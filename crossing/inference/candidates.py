@@ -7,14 +7,16 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 from scipy.stats import chi2 as chi2_law
+from scipy.stats.qmc import Sobol
 
 from crossing.inference.linear import LinearPart
 from crossing.inference.nested import Nested, nested
+from crossing.inference.priors import Range
 from crossing.inference.refine import Optimum, choose_starts, least_squares, optima
 from crossing.inference.scan import Scan, evaluator, first_cells, scan
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Callable, Sequence
 
     from numpy.typing import NDArray
 
@@ -27,6 +29,11 @@ __all__ = ["Candidate", "constant_fit", "fit_nested", "fit_scan", "linear_part"]
 
 # Local minima whose chi-squared is this much above the best need no cells of their own.
 _RELEVANT = 60.0
+# First look of the sampled shapes: 2**14 points; how far below the best, in ln likelihood, nothing matters any more.
+_LOOK_BITS = 14
+_NEGLIGIBLE = 20.0
+_BOX_ERRORS = 10.0
+_TOUCH = 1e-3
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -119,12 +126,69 @@ def fit_scan(shape: Shape, linear: LinearPart) -> Candidate:
 
 
 def fit_nested(shape: Shape, linear: LinearPart, rng: np.random.Generator) -> Candidate:
-    """Sample a shape of any number of parameters."""
-    result = nested(shape, linear, rng)
-    starts = [(result.best, result.best_label)]
-    heavy = np.argsort(result.weight)[::-1]
-    starts += [(result.theta[k], int(result.label[k])) for k in heavy[:: max(1, len(heavy) // 6)][:6]]
-    return _candidate(shape, linear, result, optima(starts, shape, linear))
+    """Sample a shape of any number of parameters: a first look over the whole prior, least squares, then dynesty."""
+    theta, label, value = _first_look(shape, linear, rng)
+    found = optima(choose_starts(theta, label, value, per_label=6), shape, linear)
+    box = _box(shape, theta, value, found, evaluator(shape, linear))
+    result = nested(shape, linear, rng, box=box)
+    if _touches(result, box, shape.ranges):
+        result = nested(shape, linear, rng)
+    again = least_squares(result.best, result.best_label, shape, linear)
+    return _candidate(shape, linear, result, sorted([*found, again], key=lambda one: one.chi2))
+
+
+def _first_look(
+    shape: Shape, linear: LinearPart, rng: np.random.Generator
+) -> tuple[NDArray[np.float64], NDArray[np.intp], NDArray[np.float64]]:
+    """Quasi-random points over the prior of every label: parameters, labels and log likelihoods."""
+    evaluate = evaluator(shape, linear)
+    theta, label, value = [], [], []
+    for number in range(len(shape.labels)):
+        unit = Sobol(len(shape.ranges), seed=rng).random_base2(_LOOK_BITS)
+        points = np.stack([prior.scale(column) for prior, column in zip(shape.ranges, unit.T, strict=True)], axis=1)
+        theta.append(points)
+        label.append(np.full(len(points), number, dtype=np.intp))
+        value.append(evaluate(points, number))
+    return np.concatenate(theta), np.concatenate(label), np.concatenate(value)
+
+
+def _box(
+    shape: Shape,
+    theta: NDArray[np.float64],
+    value: NDArray[np.float64],
+    found: Sequence[Optimum],
+    evaluate: Callable[[NDArray[np.float64], int], NDArray[np.float64]],
+) -> list[Range]:
+    """Part of the prior that holds every optimum that matters, ten standard errors wide, and every good point met."""
+    heights = np.array([float(evaluate(one.theta[None, :], one.label)[0]) for one in found])
+    top = max(float(heights.max()), float(value.max()))
+    low = [prior.high for prior in shape.ranges]
+    high = [prior.low for prior in shape.ranges]
+    for one, height in zip(found, heights, strict=True):
+        if height < top - _NEGLIGIBLE:
+            continue
+        error = one.error if one.error is not None else np.full(len(low), np.inf)
+        low = list(np.minimum(low, one.theta - _BOX_ERRORS * error))
+        high = list(np.maximum(high, one.theta + _BOX_ERRORS * error))
+    good = theta[value > top - _NEGLIGIBLE]
+    if len(good):
+        margin = 0.05 * np.array([prior.width for prior in shape.ranges])
+        low, high = list(np.minimum(low, good.min(axis=0) - margin)), list(np.maximum(high, good.max(axis=0) + margin))
+    return [
+        Range(name=prior.name, low=max(float(one), prior.low), high=min(float(two), prior.high))
+        for prior, one, two in zip(shape.ranges, low, high, strict=True)
+    ]
+
+
+def _touches(result: Nested, box: Sequence[Range], ranges: Sequence[Range]) -> bool:
+    """Whether the posterior reaches an end of the box that is not one of the prior's."""
+    for column, part, whole in zip(result.theta.T, box, ranges, strict=True):
+        edge = 0.02 * part.width
+        below = float(result.weight[column < part.low + edge].sum())
+        above = float(result.weight[column > part.high - edge].sum())
+        if (part.low > whole.low and below > _TOUCH) or (part.high < whole.high and above > _TOUCH):
+            return True
+    return False
 
 
 def _candidate(shape: Shape, linear: LinearPart, posterior: Scan | Nested, ranked: Sequence[Optimum]) -> Candidate:

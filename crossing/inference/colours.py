@@ -21,7 +21,7 @@ if TYPE_CHECKING:
 
 __all__ = ["ColourGrid", "Spectrum", "colour_grid", "tie"]
 
-_TEMPERATURES = 72
+_TEMPERATURES = 48
 _DUSTS = 6
 
 
@@ -102,7 +102,7 @@ def colour_grid(
     )
 
 
-def tie(grid: ColourGrid, keep: int = 3) -> Colours:
+def tie(grid: ColourGrid, keep: int = 2) -> Colours:
     """Amplitude ratios of a fit whose bands share one blackbody: every `keep`-th temperature, all dusts."""
     chosen = np.concatenate([np.arange(k * _DUSTS, (k + 1) * _DUSTS) for k in range(0, _TEMPERATURES, keep)])
     ratio = np.exp(grid.ln_flux[chosen] - grid.ln_flux[chosen].max(axis=1, keepdims=True))

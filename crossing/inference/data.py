@@ -153,7 +153,7 @@ def prepare(curve: LightCurve, limb_darkening: Mapping[str, float]) -> FitData:
     curve : LightCurve
         Observations; rows that are excluded stay out.
     limb_darkening : mapping of str to float
-        Linear coefficient of each band; a band that is missing is taken as uniform.
+        Linear coefficient of each band, in the order that the fit keeps; a band that is missing is taken as uniform.
 
     Raises
     ------
@@ -164,7 +164,8 @@ def prepare(curve: LightCurve, limb_darkening: Mapping[str, float]) -> FitData:
     detected, limited = rows & ~curve.is_upper_limit, rows & curve.is_upper_limit
     if not detected.any():
         raise InputError("the light curve has no detection; give at least one measured flux", where="photometry")
-    bands = tuple(dict.fromkeys(str(name) for name in curve.band[rows]))
+    present = set(map(str, curve.band[rows]))
+    bands = tuple(name for name in dict.fromkeys([*limb_darkening, *map(str, curve.band[rows])]) if name in present)
     numbers = np.array([bands.index(str(name)) if str(name) in bands else -1 for name in curve.band], dtype=np.intp)
     kept = [k for k in range(len(curve.levels)) if (curve.level[rows] == k).any()]
     renumber = np.full(len(curve.levels), -1, dtype=np.intp)

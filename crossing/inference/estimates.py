@@ -10,7 +10,10 @@ import numpy as np
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-__all__ = ["Estimate", "bound_of", "edge_density", "estimate"]
+Bound = Literal["two-sided", "upper", "lower"]
+"""Which side of an interval the data close."""
+
+__all__ = ["Bound", "Estimate", "bound_of", "edge_density", "estimate"]
 
 # A posterior that is at an end of its prior still this share as dense as at its peak is not bounded on that side.
 _OPEN_END = 0.1
@@ -27,7 +30,7 @@ class Estimate:
     """16th percentile."""
     high: float
     """84th percentile."""
-    bound: Literal["two-sided", "upper", "lower"] = "two-sided"
+    bound: Bound = "two-sided"
     """``upper``: the data give an upper limit only, and median and low depend on the prior; ``lower``: the reverse."""
     limit: float | None = None
     """The one-sided 95% limit where `bound` is not two-sided."""
@@ -72,7 +75,7 @@ def estimate(samples: NDArray[np.float64], bound: Literal["two-sided", "upper", 
     return Estimate(median=float(median), low=float(low), high=float(high), bound=bound, limit=limit)
 
 
-def bound_of(samples: NDArray[np.float64], low: float, high: float) -> Literal["two-sided", "upper", "lower"]:
+def bound_of(samples: NDArray[np.float64], low: float, high: float) -> Bound:
     """Whether samples within a uniform prior from `low` to `high` pile up at one of its ends."""
     first, last = edge_density(samples, low, high)
     if first > _OPEN_END and last <= _OPEN_END:

@@ -48,8 +48,9 @@ def plot_light_curve(fit: CrossingFit, ax: Axes | None = None, *, bands: tuple[s
     for number, band in enumerate(every):
         if bands is None or band in bands:
             _draw_band(fit, ax, band, *STYLES[number % len(STYLES)])
-    if fit.caustic_time_mjd is not None:
-        when = fit.caustic_time_mjd
+    for when in (fit.caustic_time_mjd, fit.second_caustic_time_mjd):
+        if when is None:
+            continue
         ax.axvspan(when.low, when.high, color="0.8", alpha=0.5, lw=0, zorder=0)
         ax.axvline(when.median, color="0.4", lw=0.8, zorder=0)
     ax.axhline(0.0, color="0.6", lw=0.6, zorder=0)
@@ -83,4 +84,4 @@ def _draw_band(fit: CrossingFit, ax: Axes, band: str, colour: str, marker: str, 
         top = np.array([row.flux for row in limits])
         drop = 0.8 * np.array([row.error for row in limits])
         time = [row.time_mjd for row in limits]
-        ax.errorbar(time, top, drop, uplims=True, fmt="_", color=colour, lw=0.9, ms=7, label=f"{band} limits")
+        ax.errorbar(time, top, drop, uplims=True, fmt="_", color=colour, lw=0.9, ms=7)

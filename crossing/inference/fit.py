@@ -33,6 +33,8 @@ MODELS = ("auto", "fold", "pair", "bump", "binary", "constant")
 _AUTO = ("constant", "fold", "bump", "pair")
 _SCATTERS = (0.0, 0.5, 1.0, 2.0, 4.0)
 _TYPICAL_TEMPERATURE = 10_000.0
+# Models whose ln evidences differ by less are not told apart; the simplest of them is taken.
+_INDISTINCT = 1.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -82,7 +84,7 @@ def fit_crossing(
     event : Event or LightCurve
         An event with photometry and bands; or a bare light curve, which gives times and fluxes but no star.
     model : {"auto", "fold", "pair", "bump", "binary", "constant"}
-        Model; ``auto`` takes the one of largest evidence among constant, fold, bump and pair.
+        Model; ``auto`` takes the simplest of constant, fold, bump and pair whose evidence is within 1 of the best.
     colours : {"free", "blackbody"}
         Whether each band has its own amplitude, or all are tied by one blackbody temperature.
     extra_scatter : bool
@@ -127,8 +129,14 @@ def fit_crossing(
         "samples": samples,
         "seed": seed,
     }
-    chosen = max(pooled, key=lambda one: one.ln_evidence) if model == "auto" else pooled[-1]
+    chosen = _simplest(pooled) if model == "auto" else pooled[-1]
     return summarise(event, curve, chosen, pooled, grid, priors, options, rng)
+
+
+def _simplest(pooled: list[Pooled]) -> Pooled:
+    """The simplest model that the evidence does not tell from the best."""
+    best = max(one.ln_evidence for one in pooled)
+    return next(one for one in pooled if one.ln_evidence > best - _INDISTINCT)
 
 
 def _check_options(model: str, colours: str, samples: int) -> None:

@@ -11,7 +11,9 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.special import log_ndtr, ndtr, ndtri
+from scipy.special import log_ndtr
+
+from crossing.inference.censored import constrain
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -26,12 +28,16 @@ _WINDOW = 7.5
 # Shapes this far below the best, in ln likelihood, carry no weight; how many are looked at to know the best.
 _HOPELESS = 60.0
 _FIRST_LOOK = 16
-_TAIL_NODES = 24
-_LEGENDRE = tuple(
-    (node, np.log(weight)) for node, weight in map(np.polynomial.legendre.leggauss, (_NODES, _TAIL_NODES))
-)
-_LEVEL_NODES = 12
+_NODE, _WEIGHT = np.polynomial.legendre.leggauss(_NODES)
+# Where limits bend the likelihood, its peak is looked for at so many amplitudes over the prior and over the window of
+# the detections, then between the neighbours of those that are less than _DEPTH below the best.
+_LOOK = 12
+_CLOSER = 8
+_DEPTH = 30.0
+_NOTHING = 1e-300
 _DRAW_NODES = 129
+# Half-width of the window from which levels are drawn, in standard deviations.
+_DRAW_WINDOW = 8.0
 # Work arrays are cut to about this many numbers, to stay in cache and memory.
 _CHUNK = 2_000_000
 
@@ -111,7 +117,10 @@ class LinearPart:
         gamma = (data.flux**2 * weight).sum() - (self._flux_sum**2 / self._precision).sum()
         norm = np.log(data.sigma * np.sqrt(2 * np.pi)).sum() + 0.5 * np.log(self._precision * data.level_width**2).sum()
         self._constant = -0.5 * gamma - norm
-        self._limit_levels = np.unique(data.limit_level)
+        self._limit_levels = frozenset(int(k) for k in data.limit_level)
+        self._log_range = float(np.log(np.log(high / low)))
+        # One row a channel of amplitude: each band its own, or the bands in fixed ratios.
+        self._channels = np.eye(data.n_bands) if colours is None else colours.ratio
 
     def log_marginal(self, shape: NDArray[np.float64]) -> NDArray[np.float64]:
         """Log likelihood of shapes, amplitudes and levels integrated out.
@@ -128,8 +137,8 @@ class LinearPart:
             keep the value without the limits' factor (never above one), cut at that depth.
         """
         sums = self._sums(shape)
-        if not len(self.data.limit):
-            return self._log_total(sums, limits=False)
+        if not self._limit_levels or len(shape) <= _FIRST_LOOK:
+            return self._log_total(sums, limits=True)
         value = self._log_total(sums, limits=False)
         first = np.argsort(value)[::-1][:_FIRST_LOOK]
         exact = self._log_total(sums.rows(first), limits=True)
@@ -141,19 +150,11 @@ class LinearPart:
         value[first] = exact
         return value
 
-    def _log_total(self, sums: _Sums, *, limits: bool) -> NDArray[np.float64]:
-        if self.colours is None:
-            channels = [self._channel(sums, vector, limits) for vector in np.eye(self.data.n_bands)]
-            return self._constant + np.sum(channels, axis=0)
-        nodes = np.array([self._channel(sums, vector, limits) for vector in self.colours.ratio])
-        return self._constant + log_sum(nodes.T + np.log(self.colours.weight))
-
     def log_constant(self) -> float:
         """Log likelihood of a constant source: levels alone."""
-        no_shape = np.zeros((1, self.data.all_times.size))
-        sums = self._sums(no_shape)
-        every = np.ones(self.data.n_bands)
-        return float(self._constant + self._log_factor(sums, every, np.zeros((1, 1)), limits=True)[0, 0])
+        sums = self._sums(np.zeros((1, self.data.all_times.size)))
+        every = np.ones((1, self.data.n_bands))
+        return float(self._constant + self._log_factor(sums, every, np.zeros((1, 1, 1)), limits=True)[0, 0, 0])
 
     def draw_constant(self, size: int, rng: np.random.Generator) -> LinearDraw:
         """Draw the levels of a constant source: amplitudes are zero."""
@@ -166,37 +167,33 @@ class LinearPart:
         """Draw amplitudes and levels from their posterior, one for each of the (m, n_all) shapes."""
         m = shape.shape[0]
         sums = self._sums(shape)
+        node = np.zeros(m, dtype=np.intp)
         if self.colours is None:
-            node = np.zeros(m, dtype=np.intp)
-            columns = [self._draw_amplitude(sums, vector, rng) for vector in np.eye(self.data.n_bands)]
-            amplitude = np.stack(columns, axis=1)
+            amplitude = self._draw_amplitudes(sums, self._channels, rng)
         else:
-            log_nodes = np.array([self._channel(sums, vector) for vector in self.colours.ratio]).T
-            log_nodes += np.log(self.colours.weight)
+            log_nodes = self._log_channels(sums, self._channels, limits=True) + np.log(self.colours.weight)
             cumulative = np.cumsum(np.exp(log_nodes - log_nodes.max(axis=1, keepdims=True)), axis=1)
             pick = rng.random(m) * cumulative[:, -1]
             node = np.minimum((cumulative < pick[:, None]).sum(axis=1), len(self.colours.weight) - 1)
             amplitude = np.empty((m, self.data.n_bands))
             for k in np.unique(node):
-                mine = node == k
-                vector = self.colours.ratio[k]
-                amplitude[mine] = self._draw_amplitude(sums.rows(mine), vector, rng)[:, None] * vector
+                mine, channel = node == k, self._channels[k : k + 1]
+                amplitude[mine] = self._draw_amplitudes(sums.rows(mine), channel, rng) * channel
         return LinearDraw(amplitude=amplitude, level=self._draw_levels(sums, amplitude, rng), node=node)
 
-    def best(self, shape: NDArray[np.float64], node: int | None = None) -> LinearDraw:
+    def best(self, shape: NDArray[np.float64], node: int = 0) -> LinearDraw:
         """Least-squares amplitudes (never negative) and levels for the (m, n_all) shapes; limits are left aside."""
         sums = self._sums(shape)
         if self.colours is None:
             amplitude = np.divide(sums.beta, sums.alpha, out=np.zeros_like(sums.beta), where=sums.alpha > 0)
         else:
-            vector = self.colours.ratio[node or 0]
+            vector = self.colours.ratio[node]
             alpha, beta = sums.alpha @ vector**2, sums.beta @ vector
             amplitude = np.divide(beta, alpha, out=np.zeros_like(beta), where=alpha > 0)[:, None] * vector
         amplitude = np.clip(amplitude, 0.0, self.high)
         level = self._level_mean(sums, amplitude[:, self.data.level_band])
         level = np.where(self.data.level_nonnegative, np.maximum(level, 0.0), level)
-        chosen = np.full(shape.shape[0], node or 0, dtype=np.intp)
-        return LinearDraw(amplitude=amplitude, level=level, node=chosen)
+        return LinearDraw(amplitude=amplitude, level=level, node=np.full(shape.shape[0], node, dtype=np.intp))
 
     def model(self, shape: NDArray[np.float64], draw: LinearDraw) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Model fluxes (m, n) of the detections and (m, n_limits) of the limits [nJy]."""
@@ -224,109 +221,141 @@ class LinearPart:
         """Conditional mean of the levels for amplitudes (m, n_levels)."""
         return (self._flux_sum - amplitude * sums.slope) / self._precision
 
-    def _channel(self, sums: _Sums, vector: NDArray[np.float64], limits: bool = True) -> NDArray[np.float64]:
-        """Log of the likelihood ratio averaged over the amplitude of one channel, (m,)."""
+    def _log_total(self, sums: _Sums, *, limits: bool) -> NDArray[np.float64]:
+        logs = self._log_channels(sums, self._channels, limits)
+        if self.colours is None:
+            return self._constant + logs.sum(axis=1)
+        return self._constant + log_sum(logs + np.log(self.colours.weight))
+
+    def _log_channels(self, sums: _Sums, channels: NDArray[np.float64], limits: bool) -> NDArray[np.float64]:
+        """Log of the likelihood ratio averaged over the amplitude of every channel, (m, n_channels)."""
         m = sums.alpha.shape[0]
-        out = np.empty(m)
-        limits = limits and bool(np.any(vector[self.data.limit_band] != 0.0))
-        step = max(1, _CHUNK // (_NODES * (1 + _LEVEL_NODES * limits)))
-        for start in range(0, m, step):
-            part = slice(start, start + step)
-            out[part] = self._channel_chunk(sums.rows(part), vector, limits)
-        return out
+        limits = limits and bool(self._limit_levels)
+        step = max(1, _CHUNK // (_NODES * len(channels) * (1 + self.data.limit.size * limits)))
+        if m <= step:
+            return self._log_channels_chunk(sums, channels, limits)
+        starts = range(0, m, step)
+        return np.concatenate(
+            [self._log_channels_chunk(sums.rows(slice(i, i + step)), channels, limits) for i in starts]
+        )
 
-    def _channel_chunk(self, sums: _Sums, vector: NDArray[np.float64], limits: bool) -> NDArray[np.float64]:
-        ends = self._windows(sums, vector, limits)
-        logs = []
-        for (low, high), (node, log_node_weight) in zip(ends, _LEGENDRE, strict=False):
-            half = 0.5 * (high - low)
-            ln_amplitude = low[:, None] + half[:, None] * (node + 1.0)
-            with np.errstate(divide="ignore"):
-                log_weight = log_node_weight + np.log(half)[:, None]
-            logs.append(self._log_amplitude(sums, vector, np.exp(ln_amplitude), limits) + log_weight)
-        return log_sum(np.concatenate(logs, axis=1)) - np.log(np.log(self.high / self.low))
+    def _log_channels_chunk(self, sums: _Sums, channels: NDArray[np.float64], limits: bool) -> NDArray[np.float64]:
+        alpha, beta = sums.alpha @ (channels**2).T, sums.beta @ channels.T
+        low, high = self._window(sums, channels, alpha, beta, limits)
+        half = 0.5 * (high - low)
+        amplitude = np.exp(low[..., None] + half[..., None] * (_NODE + 1.0))
+        value = self._log_amplitude(sums, channels, alpha, beta, amplitude, limits)
+        return log_sum(value + np.log(_WEIGHT)) + np.log(half) - self._log_range
 
-    def _windows(self, sums: _Sums, vector: NDArray[np.float64], limits: bool) -> list[tuple[NDArray[np.float64], ...]]:
-        """Ranges of ln(amplitude) that hold the integral: the window of the data, and below it where limits pull."""
-        alpha, beta = sums.alpha @ vector**2, sums.beta @ vector
-        with np.errstate(divide="ignore", invalid="ignore"):
-            centre, sigma = beta / alpha, alpha**-0.5
-            upper = np.where(alpha > 0, np.maximum(centre, 0.0) + _WINDOW * sigma, self.high)
-            lower = np.where(alpha > 0, centre - _WINDOW * sigma, self.low)
+    def _window(
+        self,
+        sums: _Sums,
+        channels: NDArray[np.float64],
+        alpha: NDArray[np.float64],
+        beta: NDArray[np.float64],
+        limits: bool,
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Range of ln(amplitude) that holds the integral, both ends (m, n_channels)."""
+        known = alpha > 0
+        sigma = np.where(known, alpha, 1.0) ** -0.5
+        centre = beta * sigma**2
+        upper = np.where(known, np.maximum(centre, 0.0) + _WINDOW * sigma, self.high)
+        lower = np.where(known, centre - _WINDOW * sigma, self.low)
         # At least one e-fold stays in the window where the best amplitude lies outside the prior.
-        high = np.log(np.clip(upper, self.low * np.e, self.high))
-        low = np.log(np.clip(lower, self.low, self.high / np.e))
-        windows: list[tuple[NDArray[np.float64], ...]] = [(low, high)]
-        if limits:
-            windows.append((np.full_like(low, np.log(self.low)), low))
-        return windows
+        high = np.log(np.minimum(np.maximum(upper, self.low * np.e), self.high))
+        low = np.log(np.minimum(np.maximum(lower, self.low), self.high / np.e))
+        if not limits:
+            return low, high
+        whole = np.linspace(np.log(self.low), np.log(self.high), _LOOK)
+        tried = np.concatenate(
+            [np.broadcast_to(whole, (*low.shape, _LOOK)), np.linspace(low, high, _CLOSER, axis=-1)], axis=-1
+        )
+        low, high = self._around_peak(sums, channels, alpha, beta, np.sort(tried, axis=-1))
+        return self._around_peak(sums, channels, alpha, beta, np.linspace(low, high, _LOOK, axis=-1))
+
+    def _around_peak(
+        self,
+        sums: _Sums,
+        channels: NDArray[np.float64],
+        alpha: NDArray[np.float64],
+        beta: NDArray[np.float64],
+        tried: NDArray[np.float64],
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Ends of a range around the peak, which is the only one: the likelihood is log-concave in the amplitude."""
+        value = self._log_amplitude(sums, channels, alpha, beta, np.exp(tried), limits=True)
+        good = value > value.max(axis=-1, keepdims=True) - _DEPTH
+        last = tried.shape[-1] - 1
+        below = np.maximum(np.argmax(good, axis=-1) - 1, 0)
+        above = np.minimum(last - np.argmax(good[..., ::-1], axis=-1) + 1, last)
+        ends = np.take_along_axis(tried, np.stack([below, above], axis=-1), axis=-1)
+        return ends[..., 0], ends[..., 1]
 
     def _log_amplitude(
-        self, sums: _Sums, vector: NDArray[np.float64], amplitude: NDArray[np.float64], limits: bool
+        self,
+        sums: _Sums,
+        channels: NDArray[np.float64],
+        alpha: NDArray[np.float64],
+        beta: NDArray[np.float64],
+        amplitude: NDArray[np.float64],
+        limits: bool,
     ) -> NDArray[np.float64]:
-        """Log likelihood ratio at the (m, k) amplitudes of one channel."""
-        alpha, beta = sums.alpha @ vector**2, sums.beta @ vector
-        gauss = amplitude * (beta[:, None] - 0.5 * alpha[:, None] * amplitude)
-        return gauss + self._log_factor(sums, vector, amplitude, limits)
+        """Log likelihood ratio at amplitudes (m, n_channels, n_nodes)."""
+        gauss = amplitude * (beta[..., None] - 0.5 * alpha[..., None] * amplitude)
+        return gauss + self._log_factor(sums, channels, amplitude, limits)
 
     def _log_factor(
-        self, sums: _Sums, vector: NDArray[np.float64], amplitude: NDArray[np.float64], limits: bool
+        self, sums: _Sums, channels: NDArray[np.float64], amplitude: NDArray[np.float64], limits: bool
     ) -> NDArray[np.float64]:
-        """What nonnegative levels and upper limits add to the Gaussian, (m, k), for the levels of one channel."""
+        """What nonnegative levels and upper limits add to the Gaussian, shaped as `amplitude`."""
         data = self.data
         out = np.zeros_like(amplitude)
-        for k in map(int, np.flatnonzero(vector[data.level_band] != 0.0)):
-            scale = vector[data.level_band[k]]
-            slope = scale * sums.slope[:, k, None]
-            mean = (self._flux_sum[k] - amplitude * slope) / self._precision[k]
+        for k in range(data.n_levels):
+            limited = limits and k in self._limit_levels
+            if not limited and not data.level_nonnegative[k]:
+                continue
+            ratio = channels[:, data.level_band[k]]
+            mine = np.flatnonzero(ratio)
+            flux = amplitude[:, mine] * ratio[mine, None]
+            mean = (self._flux_sum[k] - flux * sums.slope[:, k, None, None]) / self._precision[k]
             if data.level_nonnegative[k]:
-                out += np.log(2.0) + log_ndtr(mean / self._spread[k])
-            if limits and k in self._limit_levels:
-                out += self._log_limits(sums, k, scale * amplitude, mean)
+                out[:, mine] += np.log(2.0)
+            if limited:
+                out[:, mine] += constrain(*self._constraints(sums, k, flux, mean))[0]
+            else:
+                out[:, mine] += log_ndtr(mean / self._spread[k])
         return out
 
-    def _level_nodes(self, k: int, mean: NDArray[np.float64], count: int) -> NDArray[np.float64]:
-        """Equally probable values of level `k` given its conditional mean; a last axis of `count`."""
-        quantile = (np.arange(count) + 0.5) / count
-        if not self.data.level_nonnegative[k]:
-            return mean[..., None] + self._spread[k] * ndtri(quantile)
-        # Upper tail of the truncated Gaussian, kept accurate where the mean is far below zero.
-        above = ndtr(mean / self._spread[k])[..., None]
-        positive = mean[..., None] - self._spread[k] * ndtri(np.maximum(above * (1.0 - quantile), 1e-300))
-        return np.maximum(positive, 0.0)
+    def _constraints(
+        self, sums: _Sums, k: int, flux: NDArray[np.float64], mean: NDArray[np.float64]
+    ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64] | None]:
+        """What bounds level `k`, in its standard deviations from its conditional mean: see `constrain`.
 
-    def _log_limits(
-        self, sums: _Sums, k: int, amplitude: NDArray[np.float64], mean: NDArray[np.float64]
-    ) -> NDArray[np.float64]:
-        """Log probability of the non-detections that share level `k`, averaged over that level, (m, j)."""
-        data = self.data
-        level = self._level_nodes(k, mean, _LEVEL_NODES)
-        logs = np.zeros_like(level)
-        for row in np.flatnonzero(data.limit_level == k):
-            model = (amplitude * sums.limits[:, row, None])[..., None] + level
-            logs += log_ndtr((data.limit[row] - model) / data.limit_sigma[row])
-        return log_sum(logs) - np.log(_LEVEL_NODES)
+        `flux` and `mean` are (m, ...) fluxes for a unit of shape and means of the level.
+        """
+        data, spread = self.data, self._spread[k]
+        mine = np.flatnonzero(data.limit_level == k)
+        slope = sums.limits[:, mine].reshape(len(mean), *[1] * (mean.ndim - 1), mine.size)
+        upper = (data.limit[mine] - flux[..., None] * slope - mean[..., None]) / spread
+        return upper, data.limit_sigma[mine] / spread, -mean / spread if data.level_nonnegative[k] else None
 
-    def _draw_amplitude(
-        self, sums: _Sums, vector: NDArray[np.float64], rng: np.random.Generator
+    def _draw_amplitudes(
+        self, sums: _Sums, channels: NDArray[np.float64], rng: np.random.Generator
     ) -> NDArray[np.float64]:
+        """One amplitude a channel for each shape, (m, n_channels)."""
         m = sums.alpha.shape[0]
-        out = np.empty(m)
-        limits = bool(np.any(vector[self.data.limit_band] != 0.0))
-        step = max(1, _CHUNK // (2 * _DRAW_NODES * (1 + _LEVEL_NODES * limits)))
+        limits = bool(self._limit_levels)
+        step = max(1, _CHUNK // (_DRAW_NODES * len(channels) * (1 + self.data.limit.size)))
+        parts = []
         for start in range(0, m, step):
-            part = slice(start, min(start + step, m))
-            chunk = sums.rows(part)
-            ends = self._windows(chunk, vector, limits)
-            low, high = ends[-1][0], ends[0][1]
-            ln_amplitude = np.linspace(ends[0][0], high, _DRAW_NODES, axis=1)
-            if len(ends) > 1:
-                below = np.linspace(low, ends[0][0], _DRAW_NODES // 2, endpoint=False, axis=1)
-                ln_amplitude = np.concatenate([below, ln_amplitude], axis=1)
-            density = self._log_amplitude(chunk, vector, np.exp(ln_amplitude), limits)
-            density = np.exp(density - density.max(axis=1, keepdims=True))
-            out[part] = np.exp(_draw_from_density(ln_amplitude, density, rng))
-        return out
+            chunk = sums.rows(slice(start, start + step))
+            alpha, beta = chunk.alpha @ (channels**2).T, chunk.beta @ channels.T
+            ln_amplitude = np.linspace(*self._window(chunk, channels, alpha, beta, limits), _DRAW_NODES, axis=-1)
+            density = self._log_amplitude(chunk, channels, alpha, beta, np.exp(ln_amplitude), limits)
+            density = np.exp(density - density.max(axis=-1, keepdims=True))
+            count = ln_amplitude.shape[-1]
+            drawn = _draw_from_density(ln_amplitude.reshape(-1, count), density.reshape(-1, count), rng)
+            parts.append(np.exp(drawn).reshape(alpha.shape))
+        return np.concatenate(parts) if parts else np.empty((0, len(channels)))
 
     def _draw_levels(
         self, sums: _Sums, amplitude: NDArray[np.float64], rng: np.random.Generator
@@ -335,19 +364,24 @@ class LinearPart:
         mean = self._level_mean(sums, amplitude[:, data.level_band])
         out = mean + self._spread * rng.standard_normal(mean.shape)
         for k in range(data.n_levels):
-            limited = k in self._limit_levels
-            if not limited and not data.level_nonnegative[k]:
+            if k not in self._limit_levels and not data.level_nonnegative[k]:
                 continue
-            nodes = self._level_nodes(k, mean[:, k], 16 * _LEVEL_NODES)
-            logs = np.zeros_like(nodes)
-            for row in np.flatnonzero(data.limit_level == k):
-                model = (amplitude[:, data.limit_band[row]] * sums.limits[:, row])[:, None] + nodes
-                logs += log_ndtr((data.limit[row] - model) / data.limit_sigma[row])
-            cumulative = np.cumsum(np.exp(logs - logs.max(axis=1, keepdims=True)), axis=1)
-            pick = rng.random(len(nodes)) * cumulative[:, -1]
-            index = np.minimum((cumulative < pick[:, None]).sum(axis=1), nodes.shape[1] - 1)
-            out[:, k] = nodes[np.arange(len(nodes)), index]
+            out[:, k] = self._draw_constrained(sums, k, amplitude[:, data.level_band[k]], mean[:, k], rng)
         return out
+
+    def _draw_constrained(
+        self, sums: _Sums, k: int, flux: NDArray[np.float64], mean: NDArray[np.float64], rng: np.random.Generator
+    ) -> NDArray[np.float64]:
+        """One value of a bounded level for each of the (m,) amplitudes and conditional means."""
+        upper, softness, wall = self._constraints(sums, k, flux, mean)
+        _, centre, deviation = constrain(upper, softness, wall)
+        low, high = centre - _DRAW_WINDOW * deviation, centre + _DRAW_WINDOW * deviation
+        if wall is not None:
+            low, high = np.maximum(low, wall), np.maximum(high, wall + deviation)
+        x = np.linspace(low, high, _DRAW_NODES, axis=-1)
+        logs = -0.5 * x**2 + log_ndtr((upper[:, None, :] - x[..., None]) / softness).sum(axis=-1)
+        drawn = _draw_from_density(x, np.exp(logs - logs.max(axis=1, keepdims=True)), rng)
+        return np.asarray(mean + self._spread[k] * drawn)
 
 
 def _draw_from_density(

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import warnings
+from contextlib import redirect_stderr, redirect_stdout
 from dataclasses import dataclass
+from io import StringIO
 from typing import TYPE_CHECKING
 
 import dynesty
@@ -11,9 +13,12 @@ import numpy as np
 from scipy.special import logsumexp
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from numpy.typing import NDArray
 
     from crossing.inference.linear import LinearPart
+    from crossing.inference.priors import Range
     from crossing.inference.shapes import Shape
 
 __all__ = ["Nested", "nested"]
@@ -51,14 +56,14 @@ class Nested:
 class _Likelihood:
     """Log likelihood and prior transform of one alternative, as a picklable callable."""
 
-    def __init__(self, shape: Shape, linear: LinearPart, label: int) -> None:
-        self.shape, self.linear, self.label = shape, linear, label
+    def __init__(self, shape: Shape, linear: LinearPart, label: int, box: Sequence[Range]) -> None:
+        self.shape, self.linear, self.label, self.box = shape, linear, label, box
 
     def __call__(self, theta: NDArray[np.float64]) -> float:
         return float(self.linear.log_marginal(self.shape.evaluate(theta[None, :], self.label))[0])
 
     def prior(self, unit: NDArray[np.float64]) -> NDArray[np.float64]:
-        return np.array([prior.scale(u) for prior, u in zip(self.shape.ranges, unit, strict=True)])
+        return np.array([prior.scale(u) for prior, u in zip(self.box, unit, strict=True)])
 
 
 def nested(
@@ -66,8 +71,9 @@ def nested(
     linear: LinearPart,
     rng: np.random.Generator,
     *,
-    live_points: int = 300,
-    precision: float = 0.1,
+    box: Sequence[Range] | None = None,
+    live_points: int = 250,
+    precision: float = 0.2,
     most_calls: int = 150_000,
 ) -> Nested:
     """Sample a shape's posterior.
@@ -78,6 +84,9 @@ def nested(
         The model's nonlinear and linear parts.
     rng : numpy.random.Generator
         Source of random numbers.
+    box : sequence of Range, optional
+        Part of the prior's ranges outside of which the likelihood is known to be negligible; the evidence stays that
+        of the whole prior.
     live_points : int
         Points that explore the prior together.
     precision : float
@@ -85,8 +94,10 @@ def nested(
     most_calls : int
         Likelihood calls after which an alternative is given up as not converged.
     """
+    inside = shape.ranges if box is None else tuple(box)
+    shrunk = sum(float(np.log(part.width / whole.width)) for part, whole in zip(inside, shape.ranges, strict=True))
     runs = [
-        _run(_Likelihood(shape, linear, label), len(shape.ranges), rng, live_points, precision, most_calls)
+        _run(_Likelihood(shape, linear, label, inside), len(inside), rng, live_points, precision, most_calls)
         for label in range(len(shape.labels))
     ]
     log_z = np.array([run.logz[-1] for run in runs])
@@ -96,7 +107,7 @@ def nested(
     top = int(np.argmax([run.logl[-1] for run in runs]))
     share = np.exp(log_z - total)
     return Nested(
-        ln_evidence=total - float(np.log(len(runs))),
+        ln_evidence=total + shrunk - float(np.log(len(runs))),
         ln_evidence_error=float(np.sqrt(sum((s * run.logzerr[-1]) ** 2 for s, run in zip(share, runs, strict=True)))),
         theta=np.concatenate([run.samples for run in runs]),
         label=np.concatenate([np.full(len(run.samples), k, dtype=np.intp) for k, run in enumerate(runs)]),
@@ -111,9 +122,10 @@ def nested(
 def _run(
     likelihood: _Likelihood, n: int, rng: np.random.Generator, live_points: int, precision: float, most_calls: int
 ) -> dynesty.results.Results:
-    with warnings.catch_warnings():
+    # The sampler prints and dumps a traceback of its own when it is interrupted: the caller hears of it anyway.
+    with warnings.catch_warnings(), redirect_stdout(StringIO()), redirect_stderr(StringIO()):
         # Running into the call limit is reported through `complete`.
         warnings.simplefilter("ignore", UserWarning)
-        sampler = dynesty.NestedSampler(likelihood, likelihood.prior, n, nlive=live_points, rstate=rng)
+        sampler = dynesty.NestedSampler(likelihood, likelihood.prior, n, nlive=live_points, rstate=rng, sample="rwalk")
         sampler.run_nested(dlogz=precision, maxcall=most_calls, print_progress=False)
     return sampler.results

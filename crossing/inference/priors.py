@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from crossing.errors import InputError
+from crossing.stars.upper_luminosity import SOFTNESS_DEX
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -111,6 +112,8 @@ class FitPriors:
             "bump_time_days": _log_uniform(self.bump_time),
             "temperature_K": _log_uniform(self.temperature),
             "host_dust_a_v_mag": f"exponential, mean {self.host_dust:g} (Cardelli, Clayton & Mathis 1989, R_V = 3.1)",
+            "upper_luminosity": f"log L/Lsun below 5.8 (cool) to 6.5 (hot), soft by {SOFTNESS_DEX:g} dex "
+            "(Humphreys & Davidson 1979), where colours and motion are known",
             "blackbody_model_error_mag": f"Gaussian, {self.model_error:g} a band",
             "reference_levels": "Gaussian, flat over the data (free), non-negative (total fluxes), or the noise of "
             "the reference image",

@@ -76,9 +76,11 @@ def least_squares(theta: NDArray[np.float64], label: int, shape: Shape, linear: 
         vector = np.array([values[f"p{k}"].value for k in range(len(ranges))])
         return residuals(vector, label, shape, linear)[0]
 
-    fitted = lmfit.minimize(
-        objective, parameters, method="least_squares", scale_covar=False, max_nfev=400, xtol=1e-8, ftol=1e-8
-    )
+    # A flat chi-squared has no covariance: its square root is NaN, which `error` answers with None.
+    with np.errstate(invalid="ignore"):
+        fitted = lmfit.minimize(
+            objective, parameters, method="least_squares", scale_covar=False, max_nfev=400, xtol=1e-8, ftol=1e-8
+        )
     best = np.array([fitted.params[f"p{k}"].value for k in range(len(ranges))])
     stderr = [fitted.params[f"p{k}"].stderr for k in range(len(ranges))]
     error = None if any(value is None or not np.isfinite(value) for value in stderr) else np.array(stderr)

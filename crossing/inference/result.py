@@ -29,6 +29,7 @@ FLAGS: Final[dict[str, str]] = {
 
 QUANTITIES: Final[dict[str, tuple[str, str]]] = {
     "caustic_time_mjd": ("d", "time when the star's centre is on the caustic (MJD)"),
+    "second_caustic_time_mjd": ("d", "the same at the second fold of a pair, or for a binary's second star (MJD)"),
     "peak_time_mjd": ("d", "time of highest flux (MJD)"),
     "radius_time_days": ("d", "time in which the star's centre moves one radius along the caustic's normal"),
     "radius_rsun": ("solRad", "radius of the star"),
@@ -124,6 +125,8 @@ class CrossingFit:
     """Probability of each orientation (or other discrete alternative) of the model."""
     caustic_time_mjd: Estimate | None
     """Time when the star's centre is on the caustic; the first one of a pair [MJD]."""
+    second_caustic_time_mjd: Estimate | None
+    """The same at the second fold of a pair, or for the second star of a binary [MJD]."""
     peak_time_mjd: Estimate | None
     """Time of highest flux [MJD]."""
     radius_time_days: Estimate | None
@@ -228,6 +231,7 @@ class CrossingFit:
                 "photometry": self.drivers.photometry,
                 "speed": self.drivers.speed,
                 "angle": self.drivers.angle,
+                "prior_shift": self.drivers.prior_shift,
             },
             "models": [
                 {"name": one.name, "weight": one.weight, "radius_rsun": one.radius_rsun.to_dict()}

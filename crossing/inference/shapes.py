@@ -58,6 +58,9 @@ class Shape(Protocol):
     def height(self, theta: NDArray[np.float64]) -> NDArray[np.float64]:
         """Highest value of the shape for parameters (m, n_parameters)."""
 
+    def second(self, theta: NDArray[np.float64]) -> NDArray[np.float64] | None:
+        """Time from the first crossing to the second [d], where the model has one."""
+
 
 @dataclass(frozen=True, slots=True)
 class _Timed:
@@ -85,6 +88,10 @@ class _Timed:
     def features(self, label: int) -> NDArray[np.float64]:
         """Bends of a fold: onset, rise, peak, rim and the slow decline, mirrored where it is left."""
         return _FOLD_FEATURES if label == 0 else -_FOLD_FEATURES
+
+    def second(self, theta: NDArray[np.float64]) -> NDArray[np.float64] | None:
+        """No second crossing."""
+        return None
 
     def height(self, theta: NDArray[np.float64]) -> NDArray[np.float64]:
         """Peak of the fold profile, for the bands' mean limb darkening."""
@@ -149,6 +156,10 @@ class PairShape(_Timed):
         offset = self._peak_offset * np.exp(theta[:, 1])
         second = theta[:, 0] + np.exp(theta[:, 2]) - offset
         return np.where(theta[:, 3] > 0.0, second, theta[:, 0] + offset)
+
+    def second(self, theta: NDArray[np.float64]) -> NDArray[np.float64] | None:
+        """The separation of the folds."""
+        return np.exp(theta[:, 2])
 
     def height(self, theta: NDArray[np.float64]) -> NDArray[np.float64]:
         """Peak of the stronger fold."""
@@ -234,3 +245,7 @@ class BinaryShape(_Timed):
     def peak(self, theta: NDArray[np.float64], label: NDArray[np.intp]) -> NDArray[np.float64]:
         """Peak of the primary."""
         return theta[:, 0] + np.where(label == 0, 1.0, -1.0) * self._peak_offset * np.exp(theta[:, 1])
+
+    def second(self, theta: NDArray[np.float64]) -> NDArray[np.float64] | None:
+        """The delay of the secondary."""
+        return theta[:, 2]

@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from scipy.special import logsumexp
@@ -13,6 +13,7 @@ from crossing.optics.local import local_lenses
 from crossing.optics.motion import mean_normal_component, sample_normal_speed
 from crossing.optics.scales import sample_scales
 from crossing.stars.photosphere import luminosity_lsun
+from crossing.stars.upper_luminosity import log_allowed
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -46,21 +47,31 @@ class StarSamples:
 
     index: NDArray[np.intp]
     """(n,) which of the fit's draws each of these belongs to."""
-    radius: NDArray[np.float64] | None
+    radius: NDArray[np.float64] | None = None
     """(n,) radius [Rsun], if the motion is known."""
-    temperature: NDArray[np.float64] | None
+    temperature: NDArray[np.float64] | None = None
     """(n,) blackbody-equivalent temperature [K], if colours or a prior give it."""
-    luminosity: NDArray[np.float64] | None
+    luminosity: NDArray[np.float64] | None = None
     """(n,) luminosity [Lsun]."""
-    peak_magnification: NDArray[np.float64] | None
+    peak_magnification: NDArray[np.float64] | None = None
     """(n,) magnification at the peak that the fluxes require."""
     effective: float
     """Effective number of the fit's draws that carry the weight."""
+    prior_shift: float = 1.0
+    """Median radius over what it would be without the star's own priors."""
+
+    def take(self, index: NDArray[np.intp]) -> StarSamples:
+        """The draws at some places only."""
+        chosen: dict[str, Any] = {
+            name: None if (values := getattr(self, name)) is None else values[index]
+            for name in ("radius", "temperature", "luminosity", "peak_magnification")
+        }
+        return replace(self, index=self.index[index], **chosen)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class RadiusDrivers:
-    """Shares of the variance of ln(radius), summing to 1."""
+    """Shares of the variance of ln(radius), summing to 1, and what the star's own priors do to it."""
 
     photometry: float
     """The radius time."""
@@ -68,6 +79,8 @@ class RadiusDrivers:
     """The size of the effective velocity."""
     angle: float
     """The angle between motion and caustic normal."""
+    prior_shift: float
+    """Median radius over what it would be without the star's own priors (upper luminosity, event file)."""
 
 
 def normal_speed(event: Event, rng: np.random.Generator, size: int) -> NDArray[np.float64] | None:
@@ -108,7 +121,11 @@ def model_speeds(
 
 
 def radius_drivers(
-    radius_time: NDArray[np.float64], speed: NDArray[np.float64], motion: MotionRecord, rng: np.random.Generator
+    radius_time: NDArray[np.float64],
+    speed: NDArray[np.float64],
+    motion: MotionRecord,
+    prior_shift: float,
+    rng: np.random.Generator,
 ) -> RadiusDrivers:
     """Split the variance of ln(radius) into photometry, speed and angle.
 
@@ -120,7 +137,12 @@ def radius_drivers(
     fixed = MotionRecord(speed=Value.exact(float(np.median(speed))), angle=motion.angle)
     angle = min(float(np.var(np.log(sample_normal_speed(fixed, None, rng, 4000)))), moving)
     total = photometry + moving
-    return RadiusDrivers(photometry=photometry / total, speed=(moving - angle) / total, angle=angle / total)
+    return RadiusDrivers(
+        photometry=photometry / total,
+        speed=(moving - angle) / total,
+        angle=angle / total,
+        prior_shift=prior_shift,
+    )
 
 
 def star_samples(
@@ -171,13 +193,12 @@ def star_samples(
     if grid is None or (len(bands) < 2 and event.star.temperature is None):
         index, effective = _resample(log_weight, rng)
         kept = None if radius is None else radius[index]
-        return StarSamples(
-            index=index, radius=kept, temperature=None, luminosity=None, peak_magnification=None, effective=effective
-        )
+        return StarSamples(index=index, radius=kept, effective=effective, prior_shift=_shift(radius, kept))
     node_weight, scale = _colour_weights(event, amplitude, bands, grid, priors, rng)
     if radius is not None:
         luminosity = luminosity_lsun(radius[:, None], grid.temperature[None, :])
         node_weight = node_weight + _log_prior(event.star.luminosity, luminosity)
+        node_weight = node_weight + log_allowed(luminosity, grid.temperature[None, :])
     index, effective = _resample(log_weight + np.asarray(logsumexp(node_weight, axis=1)), rng)
     node = _pick_nodes(node_weight[index], rng)
     temperature = grid.temperature[node] * np.exp(rng.uniform(-0.5, 0.5, n) * _log_step(grid))
@@ -190,7 +211,12 @@ def star_samples(
         luminosity=None if chosen is None else luminosity_lsun(chosen, temperature),
         peak_magnification=None if chosen is None else peak[index] * np.exp(ln_scale) / chosen**2,
         effective=effective,
+        prior_shift=_shift(radius, chosen),
     )
+
+
+def _shift(before: NDArray[np.float64] | None, after: NDArray[np.float64] | None) -> float:
+    return 1.0 if before is None or after is None else float(np.median(after) / np.median(before))
 
 
 def _colour_weights(

@@ -7,11 +7,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from crossing.event import Event
-from crossing.inference.estimates import Estimate, bound_of, edge_density, estimate
+from crossing.inference.draws import TIMELESS, Draws, joint_draws
+from crossing.inference.estimates import Bound, Estimate, bound_of, edge_density, estimate
 from crossing.inference.linear import LinearDraw
 from crossing.inference.provenance import provenance
 from crossing.inference.result import QUANTITIES, BandCurve, CrossingFit, FittedRow, MacroRadius, ModelScore
-from crossing.inference.star import KM_PER_RSUN, SECONDS_PER_DAY, model_speeds, radius_drivers, star_samples
+from crossing.inference.star import KM_PER_RSUN, SECONDS_PER_DAY, model_speeds, radius_drivers
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -33,24 +34,7 @@ _POOR_FIT = 1e-3
 _PRIOR_SHARE = 0.7
 _CURVES = 400
 _GRID = 500
-_LEAST_EFFECTIVE = 200.0
-_NO_RADIUS = ("bump", "constant")
-
-
-class _Draws:
-    """Joint posterior draws of the chosen model over its scatters."""
-
-    def __init__(self, chosen: Pooled, size: int, rng: np.random.Generator) -> None:
-        counts = rng.multinomial(size, np.array(chosen.share) / sum(chosen.share))
-        parts = [part.sample(int(n), rng) for part, n in zip(chosen.parts, counts, strict=True) if n]
-        self.theta = np.concatenate([theta for theta, _, _ in parts])
-        self.label = np.concatenate([label for _, label, _ in parts])
-        self.amplitude = np.concatenate([draw.amplitude for _, _, draw in parts])
-        self.level = np.concatenate([draw.level for _, _, draw in parts])
-
-    def take(self, index: NDArray[np.intp]) -> None:
-        self.theta, self.label = self.theta[index], self.label[index]
-        self.amplitude, self.level = self.amplitude[index], self.level[index]
+_LEAST_EFFECTIVE = 100.0
 
 
 def summarise(
@@ -86,16 +70,17 @@ def summarise(
     """
     leading = chosen.leading
     data = leading.linear.data
-    draws = _Draws(chosen, options["samples"], rng)
-    found, effective, speeds = _estimates(event, chosen.name, leading, draws, grid, priors, rng)
-    estimates, samples = found
-    flags = _flags(chosen, pooled, draws, estimates, priors, effective, options["samples"])
+    draws = joint_draws(event, chosen, grid, priors, options["samples"], rng)
+    estimates = _estimates(chosen, draws)
+    flags = _flags(chosen, pooled, draws, estimates)
     drivers: RadiusDrivers | None = None
     macro_models: tuple[MacroRadius, ...] = ()
-    if isinstance(event, Event) and event.motion is not None and speeds is not None and "radius_time_days" in samples:
-        drivers = radius_drivers(samples["radius_time_days"], speeds, event.motion, rng)
-        macro_models = _macro_models(event, samples["radius_time_days"], rng)
-    height = leading.shape.height(draws.theta) if leading.shape is not None else np.zeros(len(draws.theta))
+    speed = draws.normal_speed
+    if isinstance(event, Event) and event.motion is not None and speed is not None:
+        time = draws.columns["radius_time_days"]
+        drivers = radius_drivers(time, speed, event.motion, draws.star.prior_shift, rng)
+        macro_models = _macro_models(event, time, rng)
+    height = np.zeros(len(draws.theta)) if leading.shape is None else leading.shape.height(draws.theta)
     return CrossingFit(
         event=event.name if isinstance(event, Event) else "light curve",
         model=chosen.name,
@@ -115,80 +100,41 @@ def summarise(
         macro_models=macro_models,
         converged="not_converged" not in flags,
         flags=flags,
-        effective_draws=effective,
+        effective_draws=draws.star.effective,
         priors=priors.to_dict(data),
         provenance=provenance(event, curve, options),
         best=_best(leading),
         rows=_rows(leading, data),
         curves=_curves(leading, draws, data) if leading.shape is not None else (),
-        samples=samples,
+        samples=draws.columns,
     )
 
 
-def _estimates(
-    event: Event | LightCurve,
-    name: str,
-    leading: Candidate,
-    draws: _Draws,
-    grid: ColourGrid | None,
-    priors: FitPriors,
-    rng: np.random.Generator,
-) -> tuple[tuple[dict[str, Estimate], dict[str, NDArray[np.float64]]], float, NDArray[np.float64] | None]:
-    """Estimates and samples by name, effective number of draws, and speeds along the normal."""
-    shape, data = leading.shape, leading.linear.data
-    if shape is None:
-        return ({}, {}), float(len(draws.theta)), None
-    timed = name not in _NO_RADIUS
-    effective, extra, speeds = float(len(draws.theta)), {}, None
-    if isinstance(event, Event):
-        star = star_samples(
-            event,
-            radius_time=np.exp(draws.theta[:, 1]) if timed else None,
-            peak=shape.height(draws.theta),
-            amplitude=draws.amplitude,
-            bands=[event.bands[band] for band in data.bands],
-            grid=grid if event.source_redshift is not None else None,
-            priors=priors,
-            rng=rng,
-        )
-        draws.take(star.index)
-        effective = star.effective
-        extra = {
-            "radius_rsun": star.radius,
-            "peak_magnification": star.peak_magnification,
-            "temperature_K": star.temperature,
-            "luminosity_lsun": star.luminosity,
-        }
-    samples: dict[str, NDArray[np.float64]] = {}
-    if timed:
-        samples["caustic_time_mjd"] = draws.theta[:, 0] + data.time_zero
-    samples["peak_time_mjd"] = shape.peak(draws.theta, draws.label) + data.time_zero
-    if timed:
-        samples["radius_time_days"] = np.exp(draws.theta[:, 1])
-    samples |= {key: values for key, values in extra.items() if values is not None}
-    if timed and "radius_rsun" in samples:
-        speeds = samples["radius_rsun"] * KM_PER_RSUN / (samples["radius_time_days"] * SECONDS_PER_DAY)
-    bound = bound_of(draws.theta[:, 1], shape.ranges[1].low, shape.ranges[1].high) if timed else "two-sided"
-    opposite = {"upper": "lower", "lower": "upper", "two-sided": "two-sided"}[bound]
-    sides = {"radius_time_days": bound, "radius_rsun": bound, "luminosity_lsun": bound, "peak_magnification": opposite}
-    estimates = {key: estimate(values, sides.get(key, "two-sided")) for key, values in samples.items()}  # type: ignore[arg-type]
-    samples |= {f"amplitude_{band}_njy": draws.amplitude[:, k] for k, band in enumerate(data.bands)}
-    samples |= {f"level_{k}_njy": draws.level[:, k] for k in range(data.n_levels)}
-    return (estimates, samples), effective, speeds
+def _estimates(chosen: Pooled, draws: Draws) -> dict[str, Estimate]:
+    """Estimates by name, with the side that the data leave open."""
+    shape = chosen.leading.shape
+    side: Bound = "two-sided"
+    if shape is not None and chosen.name not in TIMELESS:
+        side = bound_of(draws.theta[:, 1], shape.ranges[1].low, shape.ranges[1].high)
+    opposite: Bound = "lower" if side == "upper" else "upper" if side == "lower" else side
+    sides = dict.fromkeys(("radius_time_days", "radius_rsun", "luminosity_lsun"), side)
+    sides["peak_magnification"] = opposite
+    return {
+        name: estimate(draws.columns[name], sides.get(name, "two-sided"))
+        for name in QUANTITIES
+        if name in draws.columns
+    }
 
 
 def _flags(
     chosen: Pooled,
     pooled: Sequence[Pooled],
-    draws: _Draws,
+    draws: Draws,
     estimates: dict[str, Estimate],
-    priors: FitPriors,
-    effective: float,
-    size: int,
 ) -> tuple[str, ...]:
     leading, flags = chosen.leading, []
     settled = all(part.complete for part in chosen.parts) and (leading.best is None or leading.best.success)
-    if not settled or effective < min(_LEAST_EFFECTIVE, 0.5 * size):
+    if not settled or draws.star.effective < _LEAST_EFFECTIVE:
         flags.append("not_converged")
     if leading.shape is not None and leading.best is not None:
         # An optimum at an end of the durations is an unresolved crossing, which has a flag of its own.
@@ -210,7 +156,7 @@ def _flags(
     return tuple(flags)
 
 
-def _orientation(leading: Candidate, draws: _Draws) -> dict[str, float]:
+def _orientation(leading: Candidate, draws: Draws) -> dict[str, float]:
     if leading.shape is None:
         return {}
     return {name: float(np.mean(draws.label == k)) for k, name in enumerate(leading.shape.labels)}
@@ -302,7 +248,7 @@ def _rows(leading: Candidate, data: FitData) -> tuple[FittedRow, ...]:
     )
 
 
-def _curves(leading: Candidate, draws: _Draws, data: FitData) -> tuple[BandCurve, ...]:
+def _curves(leading: Candidate, draws: Draws, data: FitData) -> tuple[BandCurve, ...]:
     shape = leading.shape
     if shape is None or leading.best is None:
         return ()

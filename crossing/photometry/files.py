@@ -72,6 +72,8 @@ def _read_bytes(path: Path) -> bytes:
                 "keep only the rows of this event"
             )
         return path.read_bytes()
+    except InputError:
+        raise
     except (OSError, ValueError) as error:
         raise InputError(f"cannot be read: {getattr(error, 'strerror', None) or error}") from error
 

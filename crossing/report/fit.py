@@ -97,6 +97,10 @@ def fit_text(fit: CrossingFit) -> str:
             f"  the radius interval is driven by photometry {shares.photometry:.0%}, "
             f"speed {shares.speed:.0%}, angle to the caustic {shares.angle:.0%}"
         )
+        lines.append(
+            "  the star's own priors (upper luminosity, event file) multiply the median radius "
+            f"by {shares.prior_shift:.2f}"
+        )
     for model in fit.macro_models:
         lines.append(f"  {model.name} (weight {model.weight:.2f}): radius {model.radius_rsun.text('Rsun')}")
     lines.append("  priors:")

@@ -9,10 +9,10 @@ import numpy as np
 import numpy.typing as npt
 
 from crossing.errors import InputError
+from crossing.event.quantities import AB_ZERO_POINT
 from crossing.optics.constants import BOLTZMANN, L_SUN, LIGHT_SPEED, MPC, PLANCK, R_SUN, STEFAN_BOLTZMANN
 
 __all__ = [
-    "AB_ZERO_POINT",
     "ab_magnitude",
     "blackbody_flux_njy",
     "flux_njy_from_magnitude",
@@ -23,8 +23,6 @@ __all__ = [
 
 Array: TypeAlias = npt.NDArray[np.float64]
 
-AB_ZERO_POINT: Final = 31.4
-"""AB magnitude of 1 nJy, from m = -2.5 log10(F / (erg/s/cm2/Hz)) - 48.6 (Oke & Gunn 1983, ApJ 266, 713)."""
 _NJY: Final = 1e-35
 _SUN: Final = 4 * pi * R_SUN**2 * STEFAN_BOLTZMANN / L_SUN
 # Photon-weighted mean over a top-hat: a blackbody is so smooth that eight points reach 1e-8 in bands 80% wide.
