@@ -34,6 +34,9 @@ _LOOK_BITS = 14
 _NEGLIGIBLE = 20.0
 _BOX_ERRORS = 10.0
 _TOUCH = 1e-3
+# Live points of a quick run, good to about 0.5 in ln evidence, and what counts as clearly worse.
+_QUICK_POINTS = 100
+_CLEARLY_WORSE = 4.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -125,11 +128,25 @@ def fit_scan(shape: Shape, linear: LinearPart) -> Candidate:
     return _candidate(shape, linear, result, ranked)
 
 
-def fit_nested(shape: Shape, linear: LinearPart, rng: np.random.Generator) -> Candidate:
-    """Sample a shape of any number of parameters: a first look over the whole prior, least squares, then dynesty."""
+def fit_nested(shape: Shape, linear: LinearPart, rng: np.random.Generator, rival: float = -np.inf) -> Candidate:
+    """Sample a shape of any number of parameters: a first look over the whole prior, least squares, then dynesty.
+
+    Parameters
+    ----------
+    shape, linear
+        The model's nonlinear and linear parts.
+    rng : numpy.random.Generator
+        Source of random numbers.
+    rival : float
+        ln evidence of another model: where a quick run falls clearly short of it, that run is all that is made.
+    """
     theta, label, value = _first_look(shape, linear, rng)
     found = optima(choose_starts(theta, label, value, per_label=6), shape, linear)
     box = _box(shape, theta, value, found, evaluator(shape, linear))
+    if rival > -np.inf:
+        result = nested(shape, linear, rng, box=box, live_points=_QUICK_POINTS, precision=0.5)
+        if not _touches(result, box, shape.ranges) and result.ln_evidence < rival - _CLEARLY_WORSE:
+            return _candidate(shape, linear, result, found)
     result = nested(shape, linear, rng, box=box)
     if _touches(result, box, shape.ranges):
         result = nested(shape, linear, rng)

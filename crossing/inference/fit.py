@@ -121,7 +121,11 @@ def fit_crossing(
     tied = tie(grid) if colours == "blackbody" and grid is not None else None
     setting = _Setting(data=data, priors=priors, grid=grid, colours=tied, rng=rng)
     names = _AUTO if model == "auto" else tuple(dict.fromkeys(("constant", model)))
-    pooled = [_pool(name, setting, _SCATTERS if extra_scatter else (0.0,)) for name in names]
+    pooled: list[Pooled] = []
+    for name in names:
+        # A model that was asked for by name is sampled well whatever the others do.
+        rival = max((one.ln_evidence for one in pooled), default=-np.inf) if model == "auto" else -np.inf
+        pooled.append(_pool(name, setting, _SCATTERS if extra_scatter else (0.0,), rival))
     options: dict[str, Any] = {
         "model": model,
         "colours": colours,
@@ -169,9 +173,9 @@ def _grid(event: Event | LightCurve, data: FitData, priors: FitPriors) -> Colour
     return colour_grid([event.bands[name] for name in data.bands], redshift, distance, priors)
 
 
-def _pool(name: str, setting: _Setting, scatters: tuple[float, ...]) -> Pooled:
-    builder: Callable[[FitData, _Setting], Candidate] = _BUILDERS[name]
-    parts = tuple(builder(setting.data.with_scatter(scatter), setting) for scatter in scatters)
+def _pool(name: str, setting: _Setting, scatters: tuple[float, ...], rival: float) -> Pooled:
+    builder = _BUILDERS[name]
+    parts = tuple(builder(setting.data.with_scatter(scatter), setting, rival) for scatter in scatters)
     logs = np.array([part.ln_evidence for part in parts])
     total = float(log_sum(logs))
     return Pooled(
@@ -182,32 +186,32 @@ def _pool(name: str, setting: _Setting, scatters: tuple[float, ...]) -> Pooled:
     )
 
 
-def _constant(data: FitData, setting: _Setting) -> Candidate:
+def _constant(data: FitData, setting: _Setting, rival: float) -> Candidate:
     return constant_fit(linear_part(data, setting.priors))
 
 
-def _fold(data: FitData, setting: _Setting) -> Candidate:
+def _fold(data: FitData, setting: _Setting, rival: float) -> Candidate:
     priors = setting.priors
     shape = FoldShape(data, (priors.window(data), priors.log_range("radius_time")))
     return fit_scan(shape, linear_part(data, priors, setting.colours))
 
 
-def _bump(data: FitData, setting: _Setting) -> Candidate:
+def _bump(data: FitData, setting: _Setting, rival: float) -> Candidate:
     priors = setting.priors
     shape = BumpShape(data, (priors.window(data), priors.log_range("bump_time")))
     return fit_scan(shape, linear_part(data, priors, setting.colours))
 
 
-def _pair(data: FitData, setting: _Setting) -> Candidate:
+def _pair(data: FitData, setting: _Setting, rival: float) -> Candidate:
     priors = setting.priors
     window = priors.window(data)
     separation = priors.log_range("separation")
     longest = Range(name=separation.name, low=separation.low, high=min(separation.high, float(np.log(window.width))))
     ranges = (window, priors.log_range("radius_time"), longest, priors.log_range("strength_ratio"))
-    return fit_nested(PairShape(data, ranges), linear_part(data, priors, setting.colours), setting.rng)
+    return fit_nested(PairShape(data, ranges), linear_part(data, priors, setting.colours), setting.rng, rival)
 
 
-def _binary(data: FitData, setting: _Setting) -> Candidate:
+def _binary(data: FitData, setting: _Setting, rival: float) -> Candidate:
     priors = setting.priors
     if setting.grid is None:
         raise InputError("the binary model needs the bands' wavelengths; give an event file", where="model")
@@ -223,10 +227,10 @@ def _binary(data: FitData, setting: _Setting) -> Candidate:
     )
     one_amplitude = Colours(ratio=np.ones((1, data.n_bands)), weight=np.ones(1))
     shape = BinaryShape(data, ranges, setting.grid.spectrum)
-    return fit_nested(shape, linear_part(data, priors, one_amplitude), setting.rng)
+    return fit_nested(shape, linear_part(data, priors, one_amplitude), setting.rng, rival)
 
 
-_BUILDERS: dict[str, Callable[[FitData, _Setting], Candidate]] = {
+_BUILDERS: dict[str, Callable[[FitData, _Setting, float], Candidate]] = {
     "constant": _constant,
     "fold": _fold,
     "bump": _bump,

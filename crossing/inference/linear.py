@@ -30,16 +30,14 @@ _HOPELESS = 60.0
 _FIRST_LOOK = 16
 _NODE, _WEIGHT = np.polynomial.legendre.leggauss(_NODES)
 # Where limits bend the likelihood, its peak is looked for at so many amplitudes over the prior and over the window of
-# the detections, then between the neighbours of those that are less than _DEPTH below the best.
-_LOOK = 12
-_CLOSER = 8
+# the detections; the integral runs between the neighbours of those that are less than _DEPTH below the best.
+_LOOK, _LOOK_CLOSER = 24, 8
 _DEPTH = 30.0
-_NOTHING = 1e-300
 _DRAW_NODES = 129
-# Half-width of the window from which levels are drawn, in standard deviations.
+# Half-width of the window that levels are drawn from, in standard deviations.
 _DRAW_WINDOW = 8.0
-# Work arrays are cut to about this many numbers, to stay in cache and memory.
-_CHUNK = 2_000_000
+# Work arrays are cut to about this many numbers, to stay in the processor's caches.
+_CHUNK = 200_000
 
 
 def log_sum(logs: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -181,19 +179,35 @@ class LinearPart:
                 amplitude[mine] = self._draw_amplitudes(sums.rows(mine), channel, rng) * channel
         return LinearDraw(amplitude=amplitude, level=self._draw_levels(sums, amplitude, rng), node=node)
 
-    def best(self, shape: NDArray[np.float64], node: int = 0) -> LinearDraw:
-        """Least-squares amplitudes (never negative) and levels for the (m, n_all) shapes; limits are left aside."""
-        sums = self._sums(shape)
-        if self.colours is None:
-            amplitude = np.divide(sums.beta, sums.alpha, out=np.zeros_like(sums.beta), where=sums.alpha > 0)
-        else:
-            vector = self.colours.ratio[node]
-            alpha, beta = sums.alpha @ vector**2, sums.beta @ vector
-            amplitude = np.divide(beta, alpha, out=np.zeros_like(beta), where=alpha > 0)[:, None] * vector
-        amplitude = np.clip(amplitude, 0.0, self.high)
-        level = self._level_mean(sums, amplitude[:, self.data.level_band])
+    def best(self, shape: NDArray[np.float64]) -> LinearDraw:
+        """Least-squares amplitudes (never negative), levels and colour nodes for (m, n_all) shapes; no limits."""
+        pinned = np.zeros((len(shape), self.data.n_levels), dtype=np.bool_)
+        # Levels that come out negative and must not be are held at zero, and the rest is solved again.
+        for _ in range(2):
+            amplitude, node, level = self._solve(shape, pinned)
+            negative = self.data.level_nonnegative & (level < 0.0) & ~pinned
+            if not negative.any():
+                break
+            pinned |= negative
         level = np.where(self.data.level_nonnegative, np.maximum(level, 0.0), level)
-        return LinearDraw(amplitude=amplitude, level=level, node=np.full(shape.shape[0], node, dtype=np.intp))
+        return LinearDraw(amplitude=amplitude, level=np.where(pinned, 0.0, level), node=node)
+
+    def _solve(
+        self, shape: NDArray[np.float64], pinned: NDArray[np.bool_]
+    ) -> tuple[NDArray[np.float64], NDArray[np.intp], NDArray[np.float64]]:
+        """Amplitudes, colour nodes and levels of least squares, without the `pinned` levels (m, n_levels)."""
+        sums = self._sums(shape, pinned)
+        node = np.zeros(len(shape), dtype=np.intp)
+        if self.colours is None:
+            amplitude = _peak(sums.alpha, sums.beta)
+        else:
+            alpha, beta = sums.alpha @ (self._channels**2).T, sums.beta @ self._channels.T
+            common = _peak(alpha, beta)
+            # By how much each node lowers chi-squared, halved.
+            node = np.argmax(common * (beta - 0.5 * alpha * common), axis=1)
+            amplitude = np.take_along_axis(common, node[:, None], axis=1) * self._channels[node]
+        amplitude = np.minimum(amplitude, self.high)
+        return amplitude, node, self._level_mean(sums, amplitude[:, self.data.level_band])
 
     def model(self, shape: NDArray[np.float64], draw: LinearDraw) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Model fluxes (m, n) of the detections and (m, n_limits) of the limits [nJy]."""
@@ -206,13 +220,15 @@ class LinearPart:
 
     # -- the pieces ----------------------------------------------------------------------------------------------
 
-    def _sums(self, shape: NDArray[np.float64]) -> _Sums:
+    def _sums(self, shape: NDArray[np.float64], pinned: NDArray[np.bool_] | None = None) -> _Sums:
+        """Sufficient statistics; levels that are `pinned` (m, n_levels) stay at zero."""
         detected, limited = self.data.split(shape)
         slope = detected @ self._weight
         cross = detected @ self._weight_flux
         square = detected**2 @ self._weight
-        alpha = (square - slope**2 / self._precision) @ self._to_band
-        beta = (cross - slope * self._flux_sum / self._precision) @ self._to_band
+        spread2 = 1.0 / self._precision if pinned is None else ~pinned / self._precision
+        alpha = (square - slope**2 * spread2) @ self._to_band
+        beta = (cross - slope * self._flux_sum * spread2) @ self._to_band
         # Rounding may leave a flat shape with a tiny negative curvature.
         alpha = np.where(alpha > 1e-12 * (square @ self._to_band), alpha, 0.0)
         return _Sums(alpha, beta, slope, limited)
@@ -231,13 +247,17 @@ class LinearPart:
         """Log of the likelihood ratio averaged over the amplitude of every channel, (m, n_channels)."""
         m = sums.alpha.shape[0]
         limits = limits and bool(self._limit_levels)
-        step = max(1, _CHUNK // (_NODES * len(channels) * (1 + self.data.limit.size * limits)))
+        step = max(1, self._chunk(limits) // (_NODES * len(channels)))
         if m <= step:
             return self._log_channels_chunk(sums, channels, limits)
         starts = range(0, m, step)
         return np.concatenate(
             [self._log_channels_chunk(sums.rows(slice(i, i + step)), channels, limits) for i in starts]
         )
+
+    def _chunk(self, limits: bool) -> int:
+        """How many amplitudes are worked on at a time."""
+        return _CHUNK // (8 * self.data.limit.size) if limits else _CHUNK
 
     def _log_channels_chunk(self, sums: _Sums, channels: NDArray[np.float64], limits: bool) -> NDArray[np.float64]:
         alpha, beta = sums.alpha @ (channels**2).T, sums.beta @ channels.T
@@ -266,23 +286,11 @@ class LinearPart:
         low = np.log(np.minimum(np.maximum(lower, self.low), self.high / np.e))
         if not limits:
             return low, high
+        # The likelihood is log-concave in amplitude and levels: its one peak is between the neighbours of the best.
         whole = np.linspace(np.log(self.low), np.log(self.high), _LOOK)
-        tried = np.concatenate(
-            [np.broadcast_to(whole, (*low.shape, _LOOK)), np.linspace(low, high, _CLOSER, axis=-1)], axis=-1
-        )
-        low, high = self._around_peak(sums, channels, alpha, beta, np.sort(tried, axis=-1))
-        return self._around_peak(sums, channels, alpha, beta, np.linspace(low, high, _LOOK, axis=-1))
-
-    def _around_peak(
-        self,
-        sums: _Sums,
-        channels: NDArray[np.float64],
-        alpha: NDArray[np.float64],
-        beta: NDArray[np.float64],
-        tried: NDArray[np.float64],
-    ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-        """Ends of a range around the peak, which is the only one: the likelihood is log-concave in the amplitude."""
-        value = self._log_amplitude(sums, channels, alpha, beta, np.exp(tried), limits=True)
+        closer = np.linspace(low, high, _LOOK_CLOSER, axis=-1)
+        tried = np.sort(np.concatenate([np.broadcast_to(whole, (*low.shape, _LOOK)), closer], axis=-1), axis=-1)
+        value = self._log_amplitude(sums, channels, alpha, beta, np.exp(tried), limits=True, rough=True)
         good = value > value.max(axis=-1, keepdims=True) - _DEPTH
         last = tried.shape[-1] - 1
         below = np.maximum(np.argmax(good, axis=-1) - 1, 0)
@@ -298,13 +306,19 @@ class LinearPart:
         beta: NDArray[np.float64],
         amplitude: NDArray[np.float64],
         limits: bool,
+        rough: bool = False,
     ) -> NDArray[np.float64]:
         """Log likelihood ratio at amplitudes (m, n_channels, n_nodes)."""
         gauss = amplitude * (beta[..., None] - 0.5 * alpha[..., None] * amplitude)
-        return gauss + self._log_factor(sums, channels, amplitude, limits)
+        return gauss + self._log_factor(sums, channels, amplitude, limits, rough)
 
     def _log_factor(
-        self, sums: _Sums, channels: NDArray[np.float64], amplitude: NDArray[np.float64], limits: bool
+        self,
+        sums: _Sums,
+        channels: NDArray[np.float64],
+        amplitude: NDArray[np.float64],
+        limits: bool,
+        rough: bool = False,
     ) -> NDArray[np.float64]:
         """What nonnegative levels and upper limits add to the Gaussian, shaped as `amplitude`."""
         data = self.data
@@ -320,7 +334,7 @@ class LinearPart:
             if data.level_nonnegative[k]:
                 out[:, mine] += np.log(2.0)
             if limited:
-                out[:, mine] += constrain(*self._constraints(sums, k, flux, mean))[0]
+                out[:, mine] += constrain(*self._constraints(sums, k, flux, mean), rough=rough)[0]
             else:
                 out[:, mine] += log_ndtr(mean / self._spread[k])
         return out
@@ -344,7 +358,7 @@ class LinearPart:
         """One amplitude a channel for each shape, (m, n_channels)."""
         m = sums.alpha.shape[0]
         limits = bool(self._limit_levels)
-        step = max(1, _CHUNK // (_DRAW_NODES * len(channels) * (1 + self.data.limit.size)))
+        step = max(1, self._chunk(limits) // (_DRAW_NODES * len(channels)))
         parts = []
         for start in range(0, m, step):
             chunk = sums.rows(slice(start, start + step))
@@ -382,6 +396,11 @@ class LinearPart:
         logs = -0.5 * x**2 + log_ndtr((upper[:, None, :] - x[..., None]) / softness).sum(axis=-1)
         drawn = _draw_from_density(x, np.exp(logs - logs.max(axis=1, keepdims=True)), rng)
         return np.asarray(mean + self._spread[k] * drawn)
+
+
+def _peak(alpha: NDArray[np.float64], beta: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Where ``beta A - alpha A^2/2`` is largest, A not negative; zero where nothing depends on A."""
+    return np.divide(np.maximum(beta, 0.0), alpha, out=np.zeros_like(beta), where=alpha > 0)
 
 
 def _draw_from_density(
