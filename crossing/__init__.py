@@ -17,6 +17,10 @@ _HOME = {
     "effective_velocity": "crossing.optics.motion",
     "einstein_radius": "crossing.optics.scales",
     "fold_magnification": "crossing.optics.fold",
+    # star fields
+    "MagnificationMap": "crossing.shooting.magnification_map",
+    "StarField": "crossing.shooting.field",
+    "magnification_map": "crossing.shooting.mapping",
     # inference
     "FitPriors": "crossing.inference",
     "fit_crossing": "crossing.inference",
@@ -30,10 +34,13 @@ __all__ = [
     "FitPriors",
     "InputError",
     "LocalLens",
+    "MagnificationMap",
+    "StarField",
     "effective_velocity",
     "einstein_radius",
     "fit_crossing",
     "fold_magnification",
+    "magnification_map",
     "read_event",
     "read_lightcurve",
 ]

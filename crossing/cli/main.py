@@ -20,6 +20,7 @@ DONE, FAULT, INVALID, FLAGGED, INTERRUPTED = 0, 1, 2, 3, 130
 # Verb, module and one line of help; modules are imported when their verb is called.
 _VERBS = {
     "fit": ("crossing.cli.fit", "fit a caustic crossing to a light curve: radius, temperature, luminosity"),
+    "map": ("crossing.cli.map", "map the magnification of a random star field over the source plane"),
 }
 
 # Read by linear-algebra libraries when they are loaded, which no verb has done before it runs.

@@ -1,0 +1,1 @@
+"""Star fields, magnification maps and tracks: the numerical engine."""

@@ -1,0 +1,321 @@
+"""Magnification maps: one star against closed forms, area against rays, errors that hold, threads and checkpoints."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from twins import lens, one_star_images
+
+from crossing.errors import InputError
+from crossing.optics.point_lens import disc_on_axis, point_magnification
+from crossing.shooting import mapping
+from crossing.shooting.field import StarField
+from crossing.shooting.mapping import magnification_map, plan_map
+from crossing.stars.mass_functions import kroupa, salpeter
+
+
+def one_star(lam_t=1.0, lam_r=1.0):
+    """A solar mass at the origin in convergence and shear."""
+    return StarField([0.0], [0.0], [1.0], *lens(lam_t, lam_r), 30.0, 30.0, sheet=False)
+
+
+def total(u, v, lam_t, lam_r):
+    """Magnification of a point source behind it, by the image solver."""
+    return np.abs(one_star_images(u, v, lam_t, lam_r).magnification).sum()
+
+
+# lam_t, lam_r, source, total magnification. Closed forms of Chang & Refsdal (1979, 1984): at the centre, halfway to the
+# cusps of either axis, outside; on the saddle side halfway between fold and cusp, and between the two caustics.
+POINTS = [
+    (0.005, 0.4, (0.0, 0.0), 512.6582278),
+    (0.005, 0.4, (0.6245498379 / 2, 0.0), 516.8776371),
+    (0.005, 0.4, (0.0, 5.586143571 / 2), 850.2109705),
+    (0.005, 0.4, (1.2 * 0.6245498379, 0.0), 505.82192),
+    (0.1, 0.5, (0.0, 0.0), 30.0),
+    (0.1, 0.5, (0.5656854249 / 2, 0.0), 100 / 3),
+    (0.1, 0.5, (0.0, 1.264911064 / 2), 140 / 3),
+    (0.1, 0.5, (1.2 * 0.5656854249, 0.0), 27.1044147),
+    (-0.005, 0.4, ((0.1414213562 + 0.6403612262) / 2, 0.0), 556.4641248),
+    (-0.005, 0.4, (0.0, 0.0), 6.172839506),
+    (-0.1, 0.5, ((0.632455532 + 0.8485281374) / 2, 0.0), 70.35353507),
+    (-0.1, 0.5, (0.0, 0.0), 10 / 3),
+]
+
+
+@pytest.mark.parametrize(("lam_t", "lam_r", "source", "expected"), POINTS)
+def test_magnification_of_one_star(lam_t, lam_r, source, expected):
+    """One pixel of 0.001 around each point, asked for 1e-4: curvature over the pixel is below that."""
+    assert total(source[0] + 1e-9, source[1] + 1e-9, lam_t, lam_r) == pytest.approx(expected, rel=1e-6)
+    found = magnification_map(one_star(lam_t, lam_r), source, 1e-3, 1, accuracy=1e-4)
+    assert found.values[0, 0] == pytest.approx(expected, rel=5e-4)
+    assert found.images == 1
+
+
+# lam_t, lam_r, fold on the u axis at 2 sqrt(|lam_t|), its strength 1/(2 k |lam_t|^3/4).
+@pytest.mark.parametrize(
+    ("lam_t", "lam_r", "fold", "strength"),
+    [(-0.005, 0.4, 0.1414213562, 134.6404025), (-0.1, 0.5, 0.632455532, 14.05853313)],
+)
+def test_inner_fold_of_a_saddle(lam_t, lam_r, fold, strength):
+    """A strip of pixels across it: dark before, and K/sqrt(d) brighter within; the fold lies where it should."""
+    pixel = fold / 2000
+    found = magnification_map(
+        one_star(lam_t, lam_r), (fold, 0.0), 100 * pixel, 100, accuracy=1e-4, height=pixel
+    ).values[0]
+    dark = total(fold * 0.999, 0.0, lam_t, lam_r)
+    assert found[:49] == pytest.approx(dark, rel=0.02)
+    assert found[51] > 10 * dark
+    # Pixel means of K/sqrt(d), d from the fold: 2 K (sqrt(d2) - sqrt(d1)) / (d2 - d1); the next order is sqrt(d/fold).
+    # The strip's curvature moves the fold by less than 1% of a pixel.
+    edges = pixel * np.arange(0, 51)
+    expected = dark + 2 * strength * np.diff(np.sqrt(edges)) / pixel
+    assert found[50:] == pytest.approx(expected, rel=0.02)
+
+
+@pytest.mark.parametrize(("lam_t", "lam_r"), [(0.1, 0.5), (-0.1, 0.5), (0.005, 0.4), (-0.005, 0.4)])
+def test_map_of_one_star_against_its_images(lam_t, lam_r):
+    """Pixels off the caustic: means by 3 x 3 Gauss points of the image solver's total magnification.
+
+    A pixel counts as off the caustic where all nine and the pixel's corners have as many images. 1e-3 of the mean is
+    asked for; 5e-3 of it leaves room for the worst pixel.
+    """
+    found = magnification_map(one_star(lam_t, lam_r), (0.33, 0.21), 1.2, 16)
+    node, weight = np.polynomial.legendre.leggauss(3)
+    clear = 0
+    for row, v in enumerate(found.v):
+        for column, u in enumerate(found.u):
+            du, half = found.pixel_size / 2 * node, found.pixel_size / 2
+            inner = [[one_star_images(u + a, v + b, lam_t, lam_r).magnification for a in du] for b in du]
+            corners = [one_star_images(u + a, v + b, lam_t, lam_r) for a in (half, -half) for b in (half, -half)]
+            if len({len(m) for line in inner for m in line} | {len(m.magnification) for m in corners}) > 1:
+                continue
+            clear += 1
+            mean = sum(weight[i] * weight[j] / 4 * np.abs(inner[i][j]).sum() for i in range(3) for j in range(3))
+            # Close to the caustic three points are not enough: judge where the pixel is smooth.
+            if np.ptp([np.abs(m).sum() for line in inner for m in line]) < 0.3 * mean:
+                assert abs(found.values[row, column] - mean) < 5e-3 * max(mean, found.mean_magnification)
+    assert clear > 100
+
+
+def test_point_lens():
+    """Paczynski's curve, off the centre; at the centre the mean of 1/u over a pixel, 4 asinh(1)/pixel."""
+    found = magnification_map(one_star(), (0.0, 0.0), 4.02, 201, accuracy=3e-4)
+    u, v = np.meshgrid(found.u, found.v)
+    node, weight = np.polynomial.legendre.leggauss(4)
+    expected = np.zeros_like(u)
+    for a, wa in zip(node, weight, strict=True):
+        for b, wb in zip(node, weight, strict=True):
+            expected += wa * wb / 4 * point_magnification(np.hypot(u + 0.01 * a, v + 0.01 * b))
+    away = np.hypot(u, v) > 0.03
+    assert found.values[away] == pytest.approx(expected[away], rel=2e-3)
+    assert np.sqrt(np.mean((found.values / expected - 1)[away] ** 2)) < 5e-4
+    assert found.values[100, 100] == pytest.approx(4 * np.arcsinh(1.0) / 0.02, rel=3e-3)
+    # Symmetric under all turns and mirrors.
+    assert found.values == pytest.approx(found.values.T, rel=3e-3)
+    assert found.values == pytest.approx(found.values[::-1], rel=3e-3)
+
+
+def test_discs_behind_a_point_lens():
+    """On the axis sqrt(1 + 4/rho^2); at (0.5, 0.1) and (1, 0.5) by numerical integration, ten digits.
+
+    A hundred or more pixels a disc, whose sides cut through pixels with a gradient: 1e-3.
+    """
+    found = magnification_map(one_star(), (0.5, 0.0), 2.4, 480, accuracy=1e-3, height=2.4)
+    for radius, at, expected in (
+        (0.5, 0.0, float(disc_on_axis(0.5))),
+        (0.1, 0.0, 20.0249843945),
+        (0.1, 0.5, 2.19371740665),
+        (0.5, 1.0, 1.38100392790),
+    ):
+        disc = found.convolve(radius)
+        row = disc.values.shape[0] // 2
+        line = 0.5 * (disc.values[row - 1] + disc.values[row])
+        assert np.interp(at, disc.u, line) == pytest.approx(expected, rel=1e-3)
+
+
+FIELDS = {
+    "minimum": (lambda: StarField.draw(0.4, 0.4, 0.4, 3.0, seed=1), 6.0, 120),
+    "saddle": (lambda: StarField.draw(*lens(-0.05, 0.5), 0.05, 2.0, kroupa(), seed=3), 4.0, 100),
+    "macro": (lambda: StarField.draw(0.699, 0.299, 0.01, 2.0, salpeter(), seed=2), 4.0, 80),
+}
+
+
+@pytest.mark.parametrize("name", FIELDS)
+def test_area_and_rays_agree_everywhere(name):
+    """Pixel by pixel within five standard errors, Poisson's of the counts and the area map's; 120 x 120 fields of them.
+
+    A lattice scatters less than Poisson: most pixels are well within.
+    """
+    make, width, pixels = FIELDS[name]
+    field = make()
+    area = magnification_map(field, width=width, pixels=pixels)
+    rays = magnification_map(field, width=width, pixels=pixels, method="rays", rays_per_pixel=400)
+    ratio = (area.values - rays.values) / np.hypot(area.error, rays.error)
+    assert np.max(np.abs(ratio)) < 5
+    assert np.sqrt(np.mean(ratio**2)) < 1
+    assert rays.mean_magnification == pytest.approx(area.mean_magnification, rel=2e-3)
+    assert area.values.min() > 0
+
+
+def finer(field, width, pixels, accuracy, factor=4):
+    """The same map from cells that are smaller by a factor."""
+    tree = field.tree(mapping._region(field, (0.0, 0.0), width, width), exact=True)
+    job = mapping._job(field, tree, (0.0, 0.0), width, pixels, pixels, "area", accuracy, 50.0)
+    job = replace(job, step=job.step / factor, tolerance=job.tolerance / factor**2)
+    return mapping._run(job, 0, mapping._Keeper(None, 1.0, ""), 2)[0]
+
+
+@pytest.mark.parametrize("name", FIELDS)
+def test_estimated_errors_hold(name):
+    """Against a four times finer map, 16 times as good: median and 99th percentile within a factor two."""
+    make, width, pixels = FIELDS[name]
+    field, pixels = make(), pixels // 2
+    found = magnification_map(field, width=width, pixels=pixels)
+    true = np.abs(found.values - finer(field, width, pixels, 1e-3))
+    for part in (50, 99):
+        assert 0.5 < np.percentile(found.error, part) / np.percentile(true, part) < 2
+
+
+def test_threads_do_not_matter():
+    """Bitwise, since shares are the same and are added in the same order."""
+    field = FIELDS["saddle"][0]()
+    for method in ("area", "rays"):
+        one, *more = (
+            magnification_map(field, width=2.0, pixels=40, method=method, threads=threads, accuracy=1e-2)
+            for threads in (1, 2, 5)
+        )
+        for other in more:
+            assert np.array_equal(one.values, other.values)
+            assert np.array_equal(one.error, other.error)
+            assert one.rays == other.rays
+
+
+def test_nothing_asked_before_matters():
+    """Leaves are those of the window, whatever the field was used for earlier."""
+    first, second = FIELDS["saddle"][0](), FIELDS["saddle"][0]()
+    second.source_position(1e4, 0.0)
+    magnification_map(second, (3.0, 2.0), width=1.0, pixels=4, accuracy=1e-2)
+    maps = [magnification_map(field, width=2.0, pixels=20, accuracy=1e-2).values for field in (first, second)]
+    assert np.array_equal(*maps)
+
+
+def test_fluxes_of_parts_add_up():
+    """A window and its four quarters, and coarser pixels: the same light, to the accuracy of the cells."""
+    field = FIELDS["minimum"][0]()
+    whole = magnification_map(field, width=4.0, pixels=40, error=False)
+    blocks = whole.values.reshape(2, 20, 2, 20).mean(axis=(1, 3))
+    for row, v in enumerate((-1.0, 1.0)):
+        for column, u in enumerate((-1.0, 1.0)):
+            part = magnification_map(field, (u, v), width=2.0, pixels=7, error=False)
+            assert part.mean_magnification == pytest.approx(blocks[row, column], rel=1e-3)
+
+
+class KilledError(Exception):
+    """Stands for a kill."""
+
+
+def test_checkpoint_gives_the_identical_map(tmp_path, monkeypatch):
+    """Stopped again and again, the map is bitwise the undisturbed one, and finished shares are not redone."""
+    field, path = FIELDS["saddle"][0](), tmp_path / "map.npz"
+    options = {"width": 2.0, "pixels": 40, "accuracy": 1e-2}
+    run, calls = mapping._Job.run, []
+
+    def stopping(limit):
+        def stop(job, *arguments):
+            if len(calls) >= limit:
+                raise KilledError
+            calls.append(job)
+            run(job, *arguments)
+
+        return stop
+
+    monkeypatch.setattr(mapping._Job, "run", stopping(1000))
+    undisturbed = magnification_map(field, **options)
+    shares = len(calls)
+    assert shares >= 48  # two maps at least
+    calls.clear()
+    for limit in (5, 17, 30, shares - 4):
+        monkeypatch.setattr(mapping._Job, "run", stopping(limit))
+        with pytest.raises(KilledError):
+            magnification_map(field, checkpoint=path, checkpoint_seconds=0.0, threads=1, **options)
+        assert path.exists()
+    monkeypatch.setattr(mapping._Job, "run", stopping(1000))
+    resumed = magnification_map(field, checkpoint=path, checkpoint_seconds=0.0, threads=2, **options)
+    assert np.array_equal(resumed.values, undisturbed.values)
+    assert np.array_equal(resumed.error, undisturbed.error)
+    assert resumed.rays == undisturbed.rays
+    assert resumed.description == undisturbed.description
+    assert len(calls) == shares
+    assert not path.exists()
+
+
+def test_checkpoints_of_other_maps_and_damaged_ones_are_not_used(tmp_path, monkeypatch):
+    field, path = FIELDS["saddle"][0](), tmp_path / "map.npz"
+    options = {"width": 2.0, "pixels": 20, "accuracy": 1e-2, "error": False}
+    expected = magnification_map(field, **options)
+    run, calls = mapping._Job.run, []
+
+    def stop(job, *arguments):
+        calls.append(job)
+        if len(calls) > 9:
+            raise KilledError
+        run(job, *arguments)
+
+    monkeypatch.setattr(mapping._Job, "run", stop)
+    with pytest.raises(KilledError):
+        magnification_map(field, checkpoint=path, checkpoint_seconds=0.0, threads=1, **(options | {"width": 2.1}))
+    monkeypatch.setattr(mapping._Job, "run", run)
+    whole = path.read_bytes()
+    for damaged in (whole, whole[: len(whole) // 2], b"", b"no archive at all", whole[:-10] + b"0123456789"):
+        path.write_bytes(damaged)
+        found = magnification_map(field, checkpoint=path, **options)
+        assert np.array_equal(found.values, expected.values)
+        assert not path.exists()
+
+
+def test_checkpoint_that_cannot_be_written(tmp_path):
+    with pytest.raises(InputError, match="the checkpoint cannot be written"):
+        magnification_map(
+            one_star(0.1, 0.5),
+            width=1.0,
+            pixels=4,
+            accuracy=1e-2,
+            checkpoint=tmp_path / "no" / "map.npz",
+            checkpoint_seconds=0.0,
+        )
+    assert list(tmp_path.iterdir()) == []
+
+
+BAD = [
+    ({"width": 0.0}, "`width` must be positive and finite, got 0"),
+    ({"height": -1.0}, "`height` must be positive and finite, got -1"),
+    ({"method": "inverse"}, "`method` must be area or rays, got 'inverse'"),
+    ({"pixels": 0}, "`pixels` must be a whole number between 1 and 50000, got 0"),
+    ({"pixels": 10.5}, "`pixels` must be a whole number between 1 and 50000, got 10.5"),
+    ({"accuracy": 1e-9}, "`accuracy` must be between 1e-6 and 0.5, got 1e-09"),
+    ({"rays_per_pixel": 0.0}, "`rays_per_pixel` must be between 0.01 and 1e6, got 0"),
+    ({"pixels": 50000, "height": 100.0}, "the map needs .* GiB for 500000 x 50000 pixels; choose fewer pixels"),
+]
+
+
+@pytest.mark.parametrize(("options", "message"), BAD)
+def test_bad_arguments(options, message):
+    with pytest.raises(InputError, match=message):
+        magnification_map(one_star(0.1, 0.5), **({"width": 10.0, "pixels": 10} | options))
+
+
+def test_plan():
+    """Rays within a factor two of what the map then shoots, stars as they are, seconds of the right order."""
+    field = FIELDS["minimum"][0]()
+    options = {"width": 6.0, "pixels": 100, "threads": 1}
+    plan = plan_map(field, **options)
+    start = time.perf_counter()
+    found = magnification_map(field, **options)
+    spent = time.perf_counter() - start
+    assert plan.stars == len(field)
+    assert found.rays / 2 < plan.rays < found.rays * 2
+    assert spent / 10 < plan.seconds < 10 * spent  # other work may share the machine
+    assert plan.bytes > 8 * 100 * 101
