@@ -103,17 +103,18 @@ def test_scan_integrates_a_gaussian():
     assert theta.std(axis=0) == pytest.approx(sigma, rel=0.05)
 
 
-def test_scan_agrees_with_nested_sampling():
+@pytest.mark.parametrize("points", [80, pytest.param(500, marks=pytest.mark.slow)])
+def test_scan_agrees_with_nested_sampling(points):
     data = prepare(curve(n=16, signal=15.0), {})
     shape, linear = fold(data), linear_part(data, PRIORS)
     found = fit_scan(shape, linear)
-    other = nested(shape, linear, np.random.default_rng(3), live_points=500, precision=0.05)
+    other = nested(shape, linear, np.random.default_rng(3), live_points=points, precision=0.05)
     assert found.complete
     assert other.complete
     assert abs(found.ln_evidence - other.ln_evidence) < 0.2 + 2.0 * other.ln_evidence_error
     one, two = (part.sample(4000, np.random.default_rng(4))[0] for part in (found.posterior, other))
-    # medians of 4000 draws from some thousand effective samples each
-    assert np.abs(np.median(one, axis=0) - np.median(two, axis=0)).max() < 0.15 * one.std(axis=0).max()
+    # the sampler's few hundred effective samples put its medians within a fifth of a standard deviation
+    assert (np.abs(np.median(one, axis=0) - np.median(two, axis=0)) < 0.3 * one.std(axis=0)).all()
 
 
 @pytest.mark.parametrize("seed", range(6))

@@ -102,8 +102,8 @@ def colour_grid(
     )
 
 
-def tie(grid: ColourGrid, keep: int = 2) -> Colours:
-    """Amplitude ratios of a fit whose bands share one blackbody: every `keep`-th temperature, all dusts."""
-    chosen = np.concatenate([np.arange(k * _DUSTS, (k + 1) * _DUSTS) for k in range(0, _TEMPERATURES, keep)])
+def tie(grid: ColourGrid) -> Colours:
+    """Amplitude ratios of a fit whose bands share one blackbody: every second temperature, two amounts of dust."""
+    chosen = np.concatenate([np.arange(k * _DUSTS + 1, (k + 1) * _DUSTS, 3) for k in range(0, _TEMPERATURES, 2)])
     ratio = np.exp(grid.ln_flux[chosen] - grid.ln_flux[chosen].max(axis=1, keepdims=True))
     return Colours(ratio=ratio, weight=np.full(len(chosen), 1.0 / len(chosen)))

@@ -399,7 +399,7 @@ def _description(field: StarField, tally: NDArray[np.float64]) -> dict[str, Any]
 def _key(field: StarField, job: _Job, error: bool) -> str:
     """Digest of everything that the map depends on."""
     digest = hashlib.sha256()
-    for array in (field.x, field.y, field.mass, field.lens_numbers, job.scale):
+    for array in (field.x, field.y, field.mass, field.lens_numbers, job.scale, job.tree.centre):
         digest.update(np.ascontiguousarray(array).tobytes())
     numbers = (field.half_width, field.half_height, field.accuracy, job.shape, job.step, job.tolerance, job.mean)
     digest.update(repr((*numbers, job.method, error, _BLOCKS, version("crossing"))).encode())
@@ -419,7 +419,8 @@ class _Keeper:
         if self.path is None or not self.path.exists():
             return None
         try:
-            with np.load(self.path, allow_pickle=False) as archive:
+            # A file of its own, since np.load leaves a damaged one open.
+            with self.path.open("rb") as file, np.load(file, allow_pickle=False) as archive:
                 state = {name: archive[name] for name in archive.files}
         except (OSError, ValueError, EOFError, KeyError, BadZipFile):
             return None

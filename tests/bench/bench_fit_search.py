@@ -72,9 +72,7 @@ def main() -> None:
     print(f"start at the truth found better {undercut} of {options.events}")
     print(f"scan complete                   {complete} of {options.events}")
     for gap, error, shift in gaps:
-        print(
-            f"scan - dynesty: ln evidence {gap:.3f} (dynesty's error {error:.3f}), medians within {shift:.2f} sigma"
-        )
+        print(f"scan - dynesty: ln evidence {gap:.3f} (dynesty's error {error:.3f}), medians within {shift:.2f} sigma")
     data, truth, label = simulate(np.random.default_rng(5), points=120)
     shape = FoldShape(data, (priors.window(data), priors.log_range("radius_time")))
     linear = linear_part(data, priors)
