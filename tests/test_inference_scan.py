@@ -64,8 +64,8 @@ def test_first_cells_fill_the_prior() -> None:
         assert (cells[:, 2].min(), cells[:, 3].max()) == pytest.approx((DURATION.low, DURATION.high))
 
 
-# Widths in time [d] and ln duration: from narrower than the finest first cell to half of the prior. Ridges that are much
-# longer than wide and lie where no epoch is are not for this scan: its cells follow the epochs, as light curves do.
+# Widths in time [d] and ln duration: from narrower than the finest first cell to half of the prior. Ridges much longer
+# than wide that lie where no epoch is are not for this scan: its cells follow the epochs, as light curves do.
 @pytest.mark.parametrize("rho", [-0.95, 0.0, 0.95])
 @pytest.mark.parametrize(
     "sigma", [(1e-4, 1e-4), (0.01, 0.01), (0.02, 0.1), (0.05, 0.2), (0.1, 0.5), (0.5, 1.0), (4.0, 0.9)]
@@ -86,7 +86,7 @@ def test_one_gaussian(sigma: tuple[float, float], rho: float) -> None:
 
 @pytest.mark.parametrize("share", [0.5, 0.01])
 def test_two_labels(share: float) -> None:
-    likelihood = Gaussian([(-3.0, 0.5), (6.0, -2.0)], [(0.1, 0.1), (0.02, 0.1)])
+    likelihood = Gaussian([(-3.0, 0.5), (6.0, -2.0)], [(0.1, 0.1), (0.05, 0.05)])
     likelihood.shares = np.array([share, 1 - share])
     result = run(likelihood)
     # Equal prior odds of the labels halve the density.
@@ -192,8 +192,8 @@ def test_agrees_with_nested_sampling() -> None:
     )
     sampler.run_nested(dlogz=0.02, print_progress=False)
     found = sampler.results
-    # Equal prior odds of both orientations. The issue asks for 0.2; one run is good to 0.15.
-    assert found.logzerr[-1] < 0.17
+    # Equal prior odds of both orientations. The issue asks for 0.2; two errors of one run are 0.35.
+    assert found.logzerr[-1] < 0.18
     assert one.ln_evidence == pytest.approx(found.logz[-1] - np.log(2.0), abs=0.35)
     drawn = found.samples_equal(rstate=np.random.default_rng(1))
     assert_same_percentiles(one.sample(20_000, np.random.default_rng(4))[0], drawn)

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from crossing.inference.priors import FitPriors
     from crossing.inference.shapes import Shape
 
-__all__ = ["Candidate", "constant_fit", "fit_nested", "fit_scan", "linear_part"]
+__all__ = ["Candidate", "Pooled", "constant_fit", "fit_nested", "fit_scan", "linear_part"]
 
 # Local minima whose chi-squared is this much above the best need no cells of their own.
 _RELEVANT = 60.0
@@ -84,6 +84,25 @@ class Candidate:
         for one in np.unique(label):
             shape[label == one] = self.shape.evaluate(theta[label == one], int(one))
         return theta, label, self.linear.draw(shape, rng)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Pooled:
+    """One model over all values of the extra scatter that were tried."""
+
+    name: str
+    """Name of the model."""
+    ln_evidence: float
+    """Natural log of the evidence, averaged over the scatters."""
+    parts: tuple[Candidate, ...]
+    """The model for each scatter."""
+    share: tuple[float, ...]
+    """Posterior probability of each scatter."""
+
+    @property
+    def leading(self) -> Candidate:
+        """The part with the largest share."""
+        return self.parts[int(np.argmax(self.share))]
 
 
 def _degrees(data: FitData, n_nonlinear: int, n_amplitudes: int) -> int:

@@ -13,8 +13,8 @@ from crossing.inference.star import KM_PER_RSUN, SECONDS_PER_DAY, StarSamples, s
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from crossing.inference.candidates import Pooled
     from crossing.inference.colours import ColourGrid
-    from crossing.inference.fit import Pooled
     from crossing.inference.priors import FitPriors
     from crossing.photometry import LightCurve
 

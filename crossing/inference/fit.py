@@ -9,7 +9,7 @@ import numpy as np
 
 from crossing.errors import InputError
 from crossing.event import Event, require
-from crossing.inference.candidates import Candidate, constant_fit, fit_nested, fit_scan, linear_part
+from crossing.inference.candidates import Candidate, Pooled, constant_fit, fit_nested, fit_scan, linear_part
 from crossing.inference.colours import ColourGrid, colour_grid, tie
 from crossing.inference.data import FitData, prepare
 from crossing.inference.linear import Colours, log_sum
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 
     from crossing.inference.result import CrossingFit
 
-__all__ = ["MODELS", "Pooled", "fit_crossing"]
+__all__ = ["MODELS", "fit_crossing"]
 
 MODELS = ("auto", "fold", "pair", "bump", "binary", "constant")
 """Models that `fit_crossing` takes; ``auto`` tries constant, fold, bump and pair."""
@@ -35,25 +35,6 @@ _SCATTERS = (0.0, 0.5, 1.0, 2.0, 4.0)
 _TYPICAL_TEMPERATURE = 10_000.0
 # Models whose ln evidences differ by less are not told apart; the simplest of them is taken.
 _INDISTINCT = 1.0
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Pooled:
-    """One model over all values of the extra scatter that were tried."""
-
-    name: str
-    """Name of the model."""
-    ln_evidence: float
-    """Natural log of the evidence, averaged over the scatters."""
-    parts: tuple[Candidate, ...]
-    """The model for each scatter."""
-    share: tuple[float, ...]
-    """Posterior probability of each scatter."""
-
-    @property
-    def leading(self) -> Candidate:
-        """The part with the largest share."""
-        return self.parts[int(np.argmax(self.share))]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

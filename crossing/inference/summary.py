@@ -19,10 +19,9 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-    from crossing.inference.candidates import Candidate
+    from crossing.inference.candidates import Candidate, Pooled
     from crossing.inference.colours import ColourGrid
     from crossing.inference.data import FitData
-    from crossing.inference.fit import Pooled
     from crossing.inference.priors import FitPriors
     from crossing.inference.star import RadiusDrivers
     from crossing.photometry import LightCurve
