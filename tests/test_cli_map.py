@@ -133,7 +133,8 @@ def test_the_files_are_there_and_can_be_read(done: Run) -> None:
     assert found.error is not None
     table = QTable.read(done.folder / "statistics.ecsv")
     assert table["exceeding"][0] == 1.0
-    assert table.meta["mean"] == done.document["mean_magnification"]
+    # the same sum in another order
+    assert table.meta["mean"] == pytest.approx(done.document["mean_magnification"], rel=1e-12)
     assert (done.folder / "map.png").read_bytes().startswith(b"\x89PNG\r\n\x1a\n")
 
 
@@ -150,7 +151,7 @@ def test_the_numbers_are_those_of_the_event(done: Run) -> None:
     assert told["expected_mean"] == pytest.approx(1.9 / (0.32 * 0.045), rel=1e-9)
     assert told["kappa_star"] == pytest.approx(0.0084536, rel=1e-4)  # regression only: 21 Msun/pc^2 over Sigma_crit
     assert 0.5 < told["mean_magnification"] / told["expected_mean"] < 2.0  # one field of a small window
-    assert told["statistics"]["mean"] == told["mean_magnification"]
+    assert told["statistics"]["mean"] == pytest.approx(told["mean_magnification"], rel=1e-12)  # another order of sums
     assert (told["images"], told["method"], told["pixels"], told["stars"] > 100) == (1, "area", [40, 30], True)
     assert told["cautions"] == list(CAUTIONS)
 
