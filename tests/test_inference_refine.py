@@ -97,7 +97,7 @@ def check_posterior(events: list[Fitted]) -> None:
     pull = np.array(found)
     n = len(pull)
     assert n >= 0.95 * len(events)
-    # Three standard errors of the mean and of the standard deviation of n unit normals; the priors of the simulation are
+    # Three standard errors of the mean and of the standard deviation of n unit normals; the simulation's priors are
     # narrower than the fit's, which makes pulls a little narrower.
     assert np.all(np.abs(pull.mean(axis=0)) < 3.0 / np.sqrt(n) + 0.05)
     assert np.all(np.abs(pull.std(axis=0) - 0.95) < 3.0 / np.sqrt(2 * n) + 0.1)

@@ -14,7 +14,7 @@ from crossing.optics.point_lens import disc_on_axis, point_magnification
 from crossing.shooting import mapping
 from crossing.shooting.field import StarField
 from crossing.shooting.mapping import magnification_map, plan_map
-from crossing.stars.mass_functions import kroupa, salpeter
+from crossing.stars.mass_functions import chabrier, kroupa, log_normal, power_law, salpeter, single
 
 
 def one_star(lam_t=1.0, lam_r=1.0):
@@ -317,3 +317,50 @@ def test_plan():
     assert found.rays / 2 < plan.rays < found.rays * 2
     assert spent / 10 < plan.seconds < 10 * spent  # other work may share the machine
     assert plan.bytes > 8 * 100 * 101
+
+
+# lam_t, lam_r, kappa_star, masses, width of the window: mean magnification 3 to 3000, both parities.
+ENSEMBLES = [
+    (0.5, 2 / 3, 0.1, single(1.0), 160.0),
+    (0.2, 1.0, 0.4, kroupa(), 80.0),
+    (-0.2, 1.0, 0.3, salpeter(), 80.0),
+    (0.05, 0.5, 0.02, chabrier(), 60.0),
+    (-0.05, 0.5, 0.05, kroupa(), 60.0),
+    (0.005, 0.4, 0.01, single(1.0), 60.0),
+    (-0.005, 0.4, 0.003, kroupa(0.1, 100), 60.0),
+    (1 / 1200, 0.4, 0.003, power_law(1.5, 0.1, 1.0), 60.0),
+    (-1 / 1200, 0.4, 0.005, log_normal(0.3, 0.3), 60.0),
+]
+
+
+def mean_over_fields(lam_t, lam_r, kappa_star, masses, width, fields, seed):
+    """Mean magnification over 1/abs(lam_t lam_r), and its standard error from field to field.
+
+    Few and coarse pixels: what they share out wrongly, 1e-4, they do not lose.
+    """
+    found = []
+    for number in range(fields):
+        field = StarField.draw(*lens(lam_t, lam_r), kappa_star, width / 2, masses, seed=seed + number)
+        chart = magnification_map(field, width=width, pixels=20, accuracy=1e-2, error=False)
+        assert chart.expected_mean == pytest.approx(1 / abs(lam_t * lam_r), rel=1e-9)
+        found.append(chart.mean_magnification / chart.expected_mean)
+    return np.mean(found), np.std(found, ddof=1) / np.sqrt(fields)
+
+
+@pytest.mark.parametrize("number", [3, 4, 5, 7])
+def test_mean_magnification(number):
+    """Small windows scatter: three standard errors, 1 to 3%."""
+    mean, error = mean_over_fields(*ENSEMBLES[number][:4], 10.0, 5, 10 * number)
+    assert error < 0.05
+    assert abs(mean - 1) < 3 * error
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("number", range(len(ENSEMBLES)))
+def test_mean_magnification_to_a_percent(number):
+    """Three standard errors and 1%; a hundred seconds each, or less."""
+    lam_t, _, kappa_star, _, _ = ENSEMBLES[number]
+    fields = 6 if abs(lam_t) < 0.001 else 16 if kappa_star > 0.2 else 12
+    mean, error = mean_over_fields(*ENSEMBLES[number], fields, 100 * number)
+    assert error < 0.005
+    assert abs(mean - 1) < min(3 * error, 0.01)

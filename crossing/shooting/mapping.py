@@ -189,7 +189,9 @@ def _settle(
         values, part = _run(job, number, keeper, threads)
         tally = tally + part
         # The error goes as a power of the tolerance: this much of the difference of two maps is the finer one's.
-        spread = np.abs(values - previous, out=previous) / np.sqrt(1.0 + ratio ** (2.0 * _ERROR_POWER))
+        spread = np.subtract(values, previous, out=previous)
+        np.abs(spread, out=spread)
+        spread /= np.sqrt(1.0 + ratio ** (2.0 * _ERROR_POWER))
         reached = _relative(spread, values)
         if not reached > 1.2 * accuracy or number == _MOST_PASSES:
             return values, spread, tally
@@ -372,9 +374,13 @@ def _pool(workers: int) -> Iterator[Callable[..., Future[Any]]]:
 def _relative(error: NDArray[np.float64] | None, values: NDArray[np.float64]) -> float:
     if error is None:
         return float("nan")
-    # Pixels that are nearly dark, beyond a macro caustic, would drown all others.
-    known = values > 0.01 * values.mean()
-    return float(np.sqrt(np.mean((error[known] / values[known]) ** 2))) if known.any() else float("nan")
+    # Pixels that are nearly dark, beyond a macro caustic, would drown all others. Row by row: maps may be large.
+    floor, total, count = 0.01 * values.mean(), 0.0, 0
+    for row, wrong in zip(values, error, strict=True):
+        known = row > floor
+        total += float(((wrong[known] / row[known]) ** 2).sum())
+        count += int(known.sum())
+    return float(np.sqrt(total / count)) if count else float("nan")
 
 
 def _description(field: StarField, tally: NDArray[np.float64]) -> dict[str, Any]:
