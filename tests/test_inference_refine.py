@@ -129,7 +129,7 @@ def test_chi_squared_is_that_of_the_truth_less_the_parameters(events: list[Fitte
 @pytest.mark.slow
 def test_400_events(many: list[Fitted]) -> None:
     check_search(many)
-    check_orientation(many, wrong=8)  # as the issue asks: right in 392 of 400
+    check_orientation(many, wrong=8)  # right in 392 of 400
     check_pulls(pulls(many))
     check_posterior(many)
 

@@ -73,7 +73,7 @@ def test_one_gaussian(sigma: tuple[float, float], rho: float) -> None:
     likelihood = Gaussian([(1.234, -0.321)], [sigma], rho)
     result = run(likelihood)
     assert result.complete
-    # 0.02: what the issue allows between two ways to the same evidence is 0.2. 5 sigma and more fit into the prior.
+    # 0.02: what is allowed between two ways to the same evidence is 0.2. 5 sigma and more fit into the prior.
     assert result.ln_evidence == pytest.approx(-np.log(AREA), abs=0.02)
     mean, deviation = moments(result)
     # Two hundredths of a deviation are three standard errors of 20,000 draws; cells smear by about as much.
@@ -195,7 +195,7 @@ def test_agrees_with_nested_sampling() -> None:
     label = one.best_label
     assert one.weight[one.label == label].sum() > 0.9999
     found = by_dynesty(shape, linear, label, 400)
-    # Equal prior odds of both orientations. The issue asks for 0.2; two errors of one run are 0.35.
+    # Equal prior odds of both orientations. Asked for: 0.2; two errors of one run are 0.35.
     assert found.logzerr[-1] < 0.18
     assert one.ln_evidence == pytest.approx(found.logz[-1] - np.log(2.0), abs=0.35)
     drawn = found.samples_equal(rstate=np.random.default_rng(1))
@@ -210,7 +210,7 @@ def test_agrees_with_nested_sampling_closely(name: str) -> None:
     logs = np.array([run.logz[-1] for run in runs])
     total = float(np.logaddexp(*logs))
     share = np.exp(logs - total)
-    # The issue asks for 0.2; the sampler's own error must leave room for that.
+    # Asked for: 0.2; the sampler's own error must leave room for that.
     assert np.hypot(*(share * [run.logzerr[-1] for run in runs])) < 0.09
     assert one.ln_evidence == pytest.approx(total - np.log(2.0), abs=0.2)
     theta, label = one.sample(20_000, np.random.default_rng(4))

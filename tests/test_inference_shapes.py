@@ -19,7 +19,7 @@ from crossing.photometry import LightCurve
 Array = NDArray[np.float64]
 
 LIMB = 0.4
-# Error that the fit's table of fold profiles may have, by the issue.
+# Error that the fit's table of fold profiles may have.
 TABLE = 1e-7
 
 
@@ -205,7 +205,7 @@ def test_peak_and_height_against_a_dense_curve(data: FitData, number: int) -> No
 
 def test_height_of_a_fold_is_the_profiles() -> None:
     data = made(np.linspace(0.0, 40.0, 42), {"a": 0.0, "b": 0.0})
-    # check: 1.393119 at 0.652230 (uniform disc; the issue)
+    # check: 1.393119 at 0.652230 (uniform disc)
     shape = FoldShape(data, ranges(2))
     assert shape.height(np.zeros((3, 2))) == pytest.approx([1.393119] * 3, abs=1e-6)
     assert shape.peak(np.array([[2.0, np.log(3.0)]]), np.array([1])) == pytest.approx(2.0 - 3 * 0.652230, abs=3e-6)

@@ -22,7 +22,7 @@ from crossing.optics.fold import (
     profile_peak,
 )
 
-# Relative accuracy that the issue asks for; what is reached is 1e-14.
+# Relative accuracy asked for; what is reached is 1e-14.
 ASKED = 1e-10
 
 POSITIONS = np.concatenate(

@@ -9,7 +9,7 @@ from crossing.errors import InputError
 from crossing.optics.fold import fold_profile
 from crossing.optics.fold_table import fold_table
 
-# Bound of the issue; the table reaches 1e-9.
+# Bound asked for; the table reaches 1e-9.
 ASKED = 1e-7
 
 
