@@ -23,6 +23,9 @@ if TYPE_CHECKING:
 
 __all__ = ["Nested", "nested"]
 
+# An evidence cannot exceed its highest likelihood: this far below the sum, in ln, an unfinished run does not matter.
+_NEGLIGIBLE = 7.0
+
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Nested:
@@ -45,7 +48,7 @@ class Nested:
     evaluations: int
     """Number of shapes evaluated."""
     complete: bool
-    """False where the call limit came before the evidence had settled."""
+    """False where the call limit came before the evidence had settled, unless that alternative is out of the race."""
 
     def sample(self, size: int, rng: np.random.Generator) -> tuple[NDArray[np.float64], NDArray[np.intp]]:
         """Draw (size, n_parameters) parameters and their (size,) labels from the posterior."""
@@ -115,7 +118,7 @@ def nested(
         best=np.asarray(runs[top].samples[-1], dtype=np.float64),
         best_label=top,
         evaluations=int(sum(np.sum(run.ncall) for run in runs)),
-        complete=all(np.sum(run.ncall) < most_calls for run in runs),
+        complete=all(np.sum(run.ncall) < most_calls or run.logl[-1] < total - _NEGLIGIBLE for run in runs),
     )
 
 
