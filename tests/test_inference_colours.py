@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from astropy.cosmology import Planck18
 
+from crossing.errors import InputError
 from crossing.event import BandRecord, Value
 from crossing.inference.colours import ColourGrid, colour_grid, tie
 from crossing.inference.priors import FitPriors
@@ -103,3 +104,9 @@ def test_fluxes_that_vanish_stay_finite() -> None:
     found = colour_grid(hard, 3.0, 1e4, FitPriors(temperature=(100.0, 50_000.0)))
     assert np.all(np.isfinite(found.ln_flux))
     assert np.all(np.isfinite(tie(found).ratio))
+
+
+def test_a_band_beyond_the_lyman_limit_is_named() -> None:
+    hard = (BandRecord(name="far blue", wavelength=0.2), BandRecord(name="red", wavelength=2.0))
+    with pytest.raises(InputError, match=r"bands.far blue.wavelength over 1 \+ z: .* must be at least 0.1, got 0.0909"):
+        colour_grid(hard, REDSHIFT, DISTANCE, PRIORS)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import re
+
 import numpy as np
 import pytest
 from numpy.typing import NDArray
@@ -170,6 +172,18 @@ def test_scatter_where_a_band_has_limits_only() -> None:
 def test_no_detection_is_refused() -> None:
     with pytest.raises(InputError, match="the light curve has no detection; give at least one measured flux"):
         prepare(curve(is_upper_limit=True), {})
+
+
+@pytest.mark.parametrize(("flux", "error"), [(np.nan, 1.0), (np.inf, 1.0), (5.0, 0.0), (5.0, -2.0), (5.0, np.nan)])
+@pytest.mark.parametrize("limit", [False, True])
+def test_numbers_that_no_likelihood_can_take_are_refused(flux: float, error: float, limit: bool) -> None:
+    rows = LightCurve.from_arrays(
+        [61000.0, 61001.5, 61003.0], "a", [1.0, flux, 3.0], [1.0, error, 1.0], is_upper_limit=[False, limit, False]
+    )
+    told = f"flux must be finite and flux_err a positive number, got {flux:g} and {error:g} nJy at MJD 61001.50000"
+    with pytest.raises(InputError, match=re.escape(told)):
+        prepare(rows, {})
+    prepare(rows.select(np.array([True, False, True])), {})
 
 
 def test_an_empty_light_curve_is_refused() -> None:

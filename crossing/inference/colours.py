@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from crossing.errors import InputError
 from crossing.inference.linear import Colours
 from crossing.stars.extinction import dust_law, transmission
 from crossing.stars.photosphere import blackbody_flux_njy
@@ -75,6 +76,11 @@ def colour_grid(
     priors : FitPriors
         Range of temperatures and mean host dust.
 
+    Raises
+    ------
+    InputError
+        If a band lies beyond the Lyman limit of the star's galaxy.
+
     Notes
     -----
     Temperatures are equally spaced in their logarithm; the exponential prior of the dust is represented by the medians
@@ -90,7 +96,10 @@ def colour_grid(
             1.0, temperature, redshift, band.wavelength, band.width, luminosity_distance_mpc=luminosity_distance_mpc
         )
         plain[:, k] = np.log(np.maximum(flux * transmission(band.extinction.central), 1e-300))
-        curve[k] = float(dust_law(band.wavelength / (1.0 + redshift)))
+        try:
+            curve[k] = float(dust_law(band.wavelength / (1.0 + redshift)))
+        except InputError as error:
+            raise error.located(where=f"bands.{band.name}.wavelength over 1 + z") from None
     reddened = plain[:, None, :] + np.log(transmission(dust[:, None] * curve))[None, :, :]
     count = _TEMPERATURES * _DUSTS
     return ColourGrid(

@@ -145,6 +145,19 @@ def _level_prior(
     return float(shared), np.sqrt(error**2 - shared**2)
 
 
+def _check_rows(curve: LightCurve, rows: NDArray[np.bool_]) -> None:
+    """Light curves out of files are checked by the reader; others may hold anything."""
+    good = np.isfinite(curve.flux) & np.isfinite(curve.flux_err) & (curve.flux_err > 0.0)
+    wrong = np.flatnonzero(rows & ~good)
+    if wrong.size:
+        k = wrong[0]
+        msg = (
+            f"flux must be finite and flux_err a positive number, got {curve.flux[k]:g} and {curve.flux_err[k]:g} nJy "
+            f"at MJD {curve.time[k]:.5f}; correct the row or leave it out"
+        )
+        raise InputError(msg, where="photometry")
+
+
 def prepare(curve: LightCurve, limb_darkening: Mapping[str, float]) -> FitData:
     """Arrange the used rows of a light curve for fitting.
 
@@ -158,9 +171,10 @@ def prepare(curve: LightCurve, limb_darkening: Mapping[str, float]) -> FitData:
     Raises
     ------
     InputError
-        If no used row is a detection.
+        If no used row is a detection, or one has a flux or an error that no likelihood can take.
     """
     rows = curve.used
+    _check_rows(curve, rows)
     detected, limited = rows & ~curve.is_upper_limit, rows & curve.is_upper_limit
     if not detected.any():
         raise InputError("the light curve has no detection; give at least one measured flux", where="photometry")

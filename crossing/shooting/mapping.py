@@ -33,9 +33,9 @@ __all__ = ["MapPlan", "magnification_map", "plan_map"]
 
 # The image plane is cut into this many shares whatever the number of threads, and their maps are added in order.
 _BLOCKS = 24
-# A check map with a tolerance this much larger tells the error of the map, which goes as a power of the tolerance.
+# A check map with a tolerance this much larger tells the error of the map, which goes about as the tolerance.
 _COARSER = 4.0
-_ERROR_POWER = 0.85
+_ERROR_POWER = 1.0
 _MOST_PASSES = 3
 _LARGEST_STEP = 30.0
 # Sag times density that gives about the relative error 1, and the largest cell in pixels; see DEVELOPERS.md.
@@ -239,7 +239,8 @@ def plan_map(
     job.run(sample, buffer, tally)
     spent = (time.perf_counter() - start) * len(tree) / len(sample)
     count = _threads(threads, job)
-    factor = 1.35 if error and method == "area" else 1.0
+    # A coarse pass on top, and half of a finer one, which only some maps need.
+    factor = 2.2 if error and method == "area" else 1.0
     held = int(np.prod(job.buffer_shape)) * 8
     return MapPlan(
         stars=len(field),

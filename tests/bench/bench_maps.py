@@ -118,9 +118,11 @@ def main() -> None:
     for name, field in fields.items():
         equal_error(name, field, pixels)
     for name, field in fields.items():
-        spent, _ = clock(magnification_map, field, width=10.0, pixels=pixels, error=False, threads=1)
+        spent, area = clock(magnification_map, field, width=10.0, pixels=pixels, error=False, threads=1)
         both, _ = clock(magnification_map, field, width=10.0, pixels=pixels, error=False, threads=2)
         print(f"{name:<34} one thread {spent:.2f} s, two {both:.2f} s: both cores used to {50 * spent / both:.0f}%")
+        rays = area.rays / ray_rate(field, grids=500)[0]
+        print(f"{name:<34} its {area.rays:.3g} rays alone {rays:.2f} s: the map costs {spent / rays:.1f} times that")
     for name, field in fields.items():
         rate, operations = ray_rate(field, grids=500 if options.quick else 3000)
         product = matrix_rate()
