@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import os
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any, Literal
@@ -325,25 +326,39 @@ def ray_region(lens: LocalLens, half: tuple[float, float], reach: float) -> tupl
     """Half sizes of the image-plane region from which rays may land in a window, for deflections up to `reach`."""
     gx, gy = (0.0, 0.0) if lens.gradient is None else _pair(lens.gradient)
     far_u, far_v = half[0] + reach, half[1] + reach
-    if lens.lam_r == 0.0 or (lens.lam_t == 0.0 and gx == 0.0):
+    if lens.lam_r == 0.0 or (lens.lam_t == 0.0 and gx == gy == 0.0):
         raise InputError("`kappa`, `gamma` lie on the critical curve; without a gradient the field would be endless")
-    wide = _furthest_root(lens.lam_t, gx, far_u)
+    wide = _furthest_root(lens, gx, gy, far_u, far_v)
     return wide, (far_v + 0.5 * abs(gy) * wide**2) / abs(lens.lam_r)
 
 
-def _furthest_root(lam: float, g: float, far: float) -> float:
-    """Largest abs(x) with abs(lam x + g x^2 / 2) = far."""
-    if g == 0.0:
-        return far / abs(lam)
-    roots = [
-        abs(root.real) for sign in (1.0, -1.0) for root in np.roots([0.5 * g, lam, sign * far]) if abs(root.imag) < 1e-9
-    ]
-    return float(max(roots))
+def _furthest_root(lens: LocalLens, gx: float, gy: float, far_u: float, far_v: float) -> float:
+    """Largest abs(x) from which the smooth map reaches abs(u) <= far_u within abs(v) <= far_v.
+
+    With y = (v - gy x^2/2) / lam_r, u is a cubic in x. Without its cubic term it has the merging pair alone; with it, a
+    third image that is far off, beyond where a local map holds, unless gx is so small that the three are one group.
+    """
+    if gx == gy == 0.0:
+        return far_u / abs(lens.lam_t)
+    furthest = []
+    for third in (0.0, -0.5 * gy**2 / lens.lam_r):
+        found = [0.0 if third or gx else np.inf]
+        for sign_u, sign_v in itertools.product((1.0, -1.0), repeat=2):
+            shifted = lens.lam_t + sign_v * gy * far_v / lens.lam_r
+            roots = np.roots([third, 0.5 * gx, shifted, -sign_u * far_u])
+            found += [abs(root.real) for root in roots if abs(root.imag) < 1e-6 * abs(root)]
+        furthest.append(max(found))
+    return float(min(furthest)) if gy != 0.0 else float(furthest[0])
 
 
 def _isolated_region(field: StarField, half: tuple[float, float]) -> tuple[float, float]:
     """Beyond this the stars' whole mass cannot bring a ray back into the window."""
     mass = float(field.mass.sum())
+    if any(field.gradient):
+        # Farther than sqrt(mass) from all stars, no deflection exceeds sqrt(mass).
+        wide, high = ray_region(field.lens, half, np.sqrt(mass))
+        far_x, far_y = (float(np.abs(stars).max(initial=0.0) + np.sqrt(mass)) for stars in (field.x, field.y))
+        return max(wide, far_x), max(high, far_y)
     sizes = []
     for lam, stars, size in ((field.lens.lam_t, field.x, half[0]), (field.lens.lam_r, field.y, half[1])):
         if lam == 0.0:
