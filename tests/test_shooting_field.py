@@ -91,6 +91,53 @@ def test_numbers_in_numbers_out():
     assert repr(stars).startswith("StarField(150 stars, kappa=0.5, gamma=0.35, kappa_star=0.3")
 
 
+def test_on_a_star_nothing_is_finite():
+    stars = StarField([0.0, 3.0], [0.0, 1.0], 1.0, 0.5, 0.2, 10.0, 10.0)
+    assert np.isnan(stars.deflection([0.0, 1.0], [0.0, 1.0])[0]).tolist() == [True, False]
+    assert np.isnan(stars.jacobian(3.0, 1.0)).all()
+
+
+# lam_t, gradient: one side of the fold, on it, the critical curve at an angle to the stretch and along it.
+BENT = [
+    (0.02, 1e-3),
+    (0.0, (1e-4, 0.0)),
+    (0.0, (1e-4, 5e-5)),
+    (0.02, (1e-3, 5e-3)),
+    (0.0, (1e-6, 1e-3)),
+    (-0.01, (0.0, 1e-3)),
+]
+
+
+@pytest.mark.parametrize(("lam_t", "gradient"), BENT)
+def test_region_of_rays_holds_the_pair(lam_t, gradient):
+    """All of the smooth map's images of the window and its surroundings, and not much else."""
+    field = StarField(NOTHING, NOTHING, NOTHING, *lens(lam_t, 0.4), 1.0, 1.0, gradient)
+    wide, high = field.ray_region((5.0, 7.0))
+    x, y = np.meshgrid(np.linspace(-3 * wide, 3 * wide, 1201), np.linspace(-3 * high, 3 * high, 1201))
+    u, v = field.source_position(x, y)
+    lands = (np.abs(u) < 5.0) & (np.abs(v) < 7.0)
+    assert 0.9 * wide < np.max(np.abs(x[lands])) < 1.02 * wide
+    assert 0.3 * high < np.max(np.abs(y[lands])) < 1.02 * high
+
+
+def test_third_image_of_a_bent_map_is_left_out():
+    """At x = gx lam_r / gy^2 = 10000 the quadratic map has a further image, where it is no map of the lens any more."""
+    stars = StarField.draw(*lens(0.0, 0.4), 0.01, 5.0, gradient=(1e-5, -2e-5), seed=1)
+    assert stars.half_width < 2000
+
+
+def test_isolated_star_with_gradient():
+    """Rays from beyond the region miss the window, which holds the pair and the star's own images."""
+    star = StarField([3.0], [-1.0], [4.0], *lens(0.0, 0.4), 1.0, 1.0, 1e-3, sheet=False)
+    wide, high = star.ray_region((2.0, 2.0))
+    x, y = np.meshgrid(np.linspace(-3 * wide, 3 * wide, 801), np.linspace(-3 * high, 3 * high, 801))
+    u, v = star.source_position(x, y)
+    lands = (np.abs(u) < 2.0) & (np.abs(v) < 2.0)
+    assert lands.any()
+    assert np.max(np.abs(x[lands])) < wide
+    assert np.max(np.abs(y[lands])) < high
+
+
 def test_input_arrays_are_copied():
     x = np.array([1.0, 2.0])
     stars = StarField(x, x, 1.0, 0.5, 0.2, 10.0, 10.0)

@@ -144,25 +144,26 @@ FIELDS = {
 
 @pytest.mark.parametrize("name", FIELDS)
 def test_area_and_rays_agree_everywhere(name):
-    """Pixel by pixel within five standard errors, Poisson's of the counts and the area map's; 120 x 120 fields of them.
+    """Every pixel within five standard errors: Poisson's of the rays expected in it, and the area map's.
 
-    A lattice scatters less than Poisson: most pixels are well within.
+    A lattice scatters less than Poisson, so that most pixels are well within: their rms is below one.
     """
     make, width, pixels = FIELDS[name]
     field = make()
-    area = magnification_map(field, width=width, pixels=pixels)
-    rays = magnification_map(field, width=width, pixels=pixels, method="rays", rays_per_pixel=400)
-    ratio = (area.values - rays.values) / np.hypot(area.error, rays.error)
+    area = magnification_map(field, width=width, pixels=pixels, accuracy=2e-3)
+    rays = magnification_map(field, width=width, pixels=pixels, method="rays", rays_per_pixel=200)
+    poisson = np.sqrt(area.values * field.expected_mean / 200)
+    ratio = (area.values - rays.values) / np.hypot(area.error, poisson)
     assert np.max(np.abs(ratio)) < 5
-    assert np.sqrt(np.mean(ratio**2)) < 1
+    assert np.sqrt(np.mean(ratio**2)) < 0.9
+    assert np.mean(np.abs(ratio) > 3) < 0.0027  # as of a normal distribution
     assert rays.mean_magnification == pytest.approx(area.mean_magnification, rel=2e-3)
     assert area.values.min() > 0
+    assert np.median(rays.error / poisson) == pytest.approx(1.0, abs=0.1)
 
 
-@pytest.mark.parametrize("name", FIELDS)
-def test_estimated_errors_hold(name, monkeypatch):
-    """Against a four times finer map, 16 times as good: median and 99th percentile within a factor two."""
-    make, width, pixels = FIELDS[name]
+def error_ratios(monkeypatch, field, width, pixels, accuracy):
+    """Estimated errors over true ones, by a four times finer map that is 16 times as good: median, 99th percentile."""
     jobs, run = [], mapping._run
 
     def record(job, *arguments):
@@ -170,11 +171,39 @@ def test_estimated_errors_hold(name, monkeypatch):
         return run(job, *arguments)
 
     monkeypatch.setattr(mapping, "_run", record)
-    found = magnification_map(make(), width=width, pixels=pixels // 2)
+    found = magnification_map(field, width=width, pixels=pixels, accuracy=accuracy)
     finer = replace(jobs[-1], step=jobs[-1].step / 4, tolerance=jobs[-1].tolerance / 16)
-    true = np.abs(found.values - run(finer, 0, mapping._Keeper(None, 1.0, ""), 2)[0])
-    for part in (50, 99):
-        assert 0.5 < np.percentile(found.error, part) / np.percentile(true, part) < 2
+    true = np.abs(found.values - run(finer, 0, mapping.Keeper(None, 1.0, "", 24), 2)[0])
+    return [np.percentile(found.error, part) / np.percentile(true, part) for part in (50, 99)]
+
+
+@pytest.mark.parametrize("name", ["minimum", "saddle"])
+def test_estimated_errors_hold(name, monkeypatch):
+    """Right within a factor two, for a rough map."""
+    make, width, _ = FIELDS[name]
+    for ratio in error_ratios(monkeypatch, make(), width / 2, 30, 5e-3):
+        assert 0.5 < ratio < 2
+
+
+@pytest.mark.slow
+@pytest.mark.parametrize("name", FIELDS)
+@pytest.mark.parametrize("accuracy", [1e-2, 1e-3])
+def test_estimated_errors_of_fine_maps_hold(name, accuracy, monkeypatch):
+    """Right within a factor two; a minute or two each."""
+    make, width, pixels = FIELDS[name]
+    for ratio in error_ratios(monkeypatch, make(), width, pixels, accuracy):
+        assert 0.5 < ratio < 2
+
+
+def test_lost_flux_stays_below_its_bound():
+    """A field that serves a wider region of rays than is then used: what the smaller one lacks, at 5e-4 and 5e-3."""
+    for seed in (0, 1):
+        field = StarField.draw(*lens(-0.2, 0.5), 0.05, 2.0, seed=seed, lost_flux=2e-5)
+        whole = magnification_map(field, width=4.0, pixels=20, accuracy=2e-3, error=False).mean_magnification
+        for bound in (5e-4, 5e-3):
+            field.lost_flux = bound
+            part = magnification_map(field, width=4.0, pixels=20, accuracy=2e-3, error=False).mean_magnification
+            assert 0 < 1 - part / whole < bound
 
 
 def test_threads_do_not_matter():
@@ -315,7 +344,7 @@ def test_plan():
     spent = time.perf_counter() - start
     assert plan.stars == len(field)
     assert found.rays / 2 < plan.rays < found.rays * 2
-    assert spent / 10 < plan.seconds < 10 * spent  # other work may share the machine
+    assert spent / 30 < plan.seconds < 30 * spent  # other work may share the machine
     assert plan.bytes > 8 * 100 * 101
 
 
@@ -364,3 +393,22 @@ def test_mean_magnification_to_a_percent(number):
     mean, error = mean_over_fields(*ENSEMBLES[number], fields, 100 * number)
     assert error < 0.005
     assert abs(mean - 1) < min(3 * error, 0.01)
+
+
+@pytest.mark.parametrize(("lam_t", "gradient"), [(0.0, 1e-4), (0.005, -1e-4)])
+def test_mean_of_a_corrugated_macro_caustic(lam_t, gradient):
+    """Stars leave the mean of the smooth pair as it is, two images at x = (-lam_t +- sqrt(lam_t^2 + 2 g u))/g.
+
+    Within three standard errors of eight fields, and 1%.
+    """
+    found = []
+    for seed in range(8):
+        field = StarField.draw(*lens(lam_t, 0.4), 0.01, 10.0, kroupa(), gradient=gradient, seed=seed)
+        chart = magnification_map(field, width=20.0, pixels=20, accuracy=1e-2, error=False)
+        found.append(chart.mean_magnification)
+    low, high = (np.sqrt(np.maximum(lam_t**2 + 2 * gradient * u, 0.0)) / abs(gradient) for u in (-10.0, 10.0))
+    found = np.array(found) / (2 * abs(high - low) / 20 / 0.4)
+    error = np.std(found, ddof=1) / np.sqrt(8)
+    assert abs(np.mean(found) - 1) < min(3 * error, 0.01)
+    assert chart.images == 2
+    assert chart.expected_mean is None

@@ -13,7 +13,6 @@ from dataclasses import dataclass, replace
 from importlib.metadata import version
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, Literal
-from zipfile import BadZipFile
 
 import numpy as np
 from numpy.typing import NDArray
@@ -21,6 +20,7 @@ from numpy.typing import NDArray
 from crossing.errors import InputError
 from crossing.progress import track
 from crossing.shooting.area import deposit_leaves, running_sum
+from crossing.shooting.checkpoint import Keeper
 from crossing.shooting.compiled import announce_compilation
 from crossing.shooting.counting import count_leaves
 from crossing.shooting.magnification_map import MagnificationMap
@@ -37,6 +37,8 @@ _BLOCKS = 24
 _COARSER = 4.0
 _ERROR_POWER = 1.0
 _MOST_PASSES = 3
+# An error that exceeds the accuracy by less than this is let pass.
+_SLACK = 1.2
 _LARGEST_STEP = 30.0
 # Sag times density that gives about the relative error 1, and the largest cell in pixels; see DEVELOPERS.md.
 _TOLERANCE = 1.2
@@ -79,7 +81,10 @@ class _Job:
         if self.method == "area":
             deposit_leaves(leaves, lens, tree, stars, self.scale, self.step, self.tolerance, self.mean, out, tally)
         else:
-            count_leaves(leaves, lens, tree, stars, self.scale, self.step, out, tally)
+            # As the image of a pixel is stretched, so is the lattice: else rows of rays would be wider than pixels.
+            narrow, wide = (max(abs(lam), self.field.kappa_star, 1e-3) for lam in lens[:2])
+            across = float(np.sqrt(wide / narrow))
+            count_leaves(leaves, lens, tree, stars, self.scale, self.step * across, self.step / across, out, tally)
 
     @property
     def buffer_shape(self) -> tuple[int, int]:
@@ -150,7 +155,7 @@ def magnification_map(
     tree = field.tree(region, exact=True)
     announce_compilation(deposit_leaves)
     job = _job(field, tree, center, width, pixels, rows, method, accuracy, rays_per_pixel)
-    keeper = _Keeper(checkpoint, checkpoint_seconds, _key(field, job, error))
+    keeper = Keeper(checkpoint, checkpoint_seconds, _key(field, job, error), _BLOCKS)
     count = _threads(threads, job)
     spread: NDArray[np.float64] | None = None
     if error and method == "area":
@@ -177,7 +182,7 @@ def magnification_map(
 
 
 def _settle(
-    job: _Job, accuracy: float, keeper: _Keeper, threads: int
+    job: _Job, accuracy: float, keeper: Keeper, threads: int
 ) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
     """Maps of growing fineness until the difference of the last two says that the accuracy is reached.
 
@@ -193,10 +198,15 @@ def _settle(
         np.abs(spread, out=spread)
         spread /= np.sqrt(1.0 + ratio ** (2.0 * _ERROR_POWER))
         reached = _relative(spread, values)
-        if not reached > 1.2 * accuracy or number == _MOST_PASSES:
+        if not reached > _SLACK * accuracy or number == _MOST_PASSES:
             return values, spread, tally
-        ratio = min((reached / (0.75 * accuracy)) ** (1.0 / _ERROR_POWER), _LARGEST_STEP)
+        ratio = _step(reached, accuracy)
         job, previous, number = _coarser(job, 1.0 / ratio), values, number + 1
+
+
+def _step(reached: float, accuracy: float) -> float:
+    """How much smaller the tolerance must be."""
+    return float(min((reached / (0.75 * accuracy)) ** (1.0 / _ERROR_POWER), _LARGEST_STEP))
 
 
 def _coarser(job: _Job, factor: float) -> _Job:
@@ -230,25 +240,44 @@ def plan_map(
     tree = field.tree(_region(field, center, width, high), exact=True)
     announce_compilation(deposit_leaves)
     job = _job(field, tree, center, width, pixels, rows, method, accuracy, rays_per_pixel)
-    tally = np.zeros(3)
-    # Into a buffer of the full width but of few rows' worth of memory traffic: the sample is small.
-    buffer = np.zeros(job.buffer_shape)
-    job.run(np.zeros(0, dtype=np.int64), buffer, np.zeros(3))
-    sample = np.random.default_rng(0).permutation(len(tree))[: max(50, len(tree) // 50)].astype(np.int64)
-    start = time.perf_counter()
-    job.run(sample, buffer, tally)
-    spent = (time.perf_counter() - start) * len(tree) / len(sample)
+    rays, seconds = _sample_cost(job, accuracy, error and method == "area")
     count = _threads(threads, job)
-    # A coarse pass on top, and half of a finer one, which only some maps need.
-    factor = 2.2 if error and method == "area" else 1.0
     held = int(np.prod(job.buffer_shape)) * 8
     return MapPlan(
         stars=len(field),
         leaves=len(tree),
-        rays=float(tally[0] * len(tree) / len(sample) * factor),
-        seconds=spent * factor / count,
+        rays=rays,
+        seconds=seconds / count,
         bytes=tree.nbytes + held * (count + 2),
     )
+
+
+def _sample_cost(job: _Job, accuracy: float, settle: bool) -> tuple[float, float]:
+    """Rays and seconds on one thread for a whole map, from every twentieth leaf or so; `settle` as `_settle` goes."""
+    leaves = len(job.tree)
+    stride = max(1, min(20, leaves // 400))
+    sample = np.arange(stride // 2, leaves, stride, dtype=np.int64)
+    buffer, tally, finer, finer_seconds = np.zeros(job.buffer_shape), np.zeros(3), np.zeros(3), 0.0
+    job.run(sample[:0], buffer, tally)
+    start = time.perf_counter()
+    if settle:
+        _coarser(job, _COARSER).run(sample, buffer, tally)
+        np.negative(buffer, out=buffer)
+    job.run(sample, buffer, tally)
+    seconds = time.perf_counter() - start
+    if settle:
+        # Errors of leaves are independent; they count more where a map is darker than its mean, as saddles often are.
+        running_sum(buffer, buffer[:, :-1], 1.0)
+        spread = float(np.sqrt(np.mean(buffer[:, :-1] ** 2) * leaves / len(sample))) / job.mean
+        darker = 3.0 if job.field.lens.parity == "saddle" else 1.5
+        reached = darker * spread / (1.0 + _COARSER ** (2.0 * _ERROR_POWER)) ** 0.5
+        if reached > _SLACK * accuracy:
+            start = time.perf_counter()
+            _coarser(job, 1.0 / _step(reached, accuracy)).run(sample[::4], buffer, finer)
+            finer_seconds = (time.perf_counter() - start) * len(sample) / len(sample[::4])
+            finer *= len(sample) / len(sample[::4])
+    share = leaves / len(sample)
+    return float((tally[0] + finer[0]) * share), (seconds + finer_seconds) * share
 
 
 def _check(
@@ -313,7 +342,7 @@ def _threads(threads: int | None, job: _Job) -> int:
     return int(max(1, min(wanted, 0.8 * pages // held - 2)))
 
 
-def _run(job: _Job, number: int, keeper: _Keeper, threads: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+def _run(job: _Job, number: int, keeper: Keeper, threads: int) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """Map all leaves: shares in threads, each into a buffer of its own, added up in a fixed order."""
     total, tally, first = keeper.restore(number, job.buffer_shape)
     order = np.arange(len(job.tree), dtype=np.int64)
@@ -411,70 +440,3 @@ def _key(field: StarField, job: _Job, error: bool) -> str:
     numbers = (field.half_width, field.half_height, field.accuracy, job.shape, job.step, job.tolerance, job.mean)
     digest.update(repr((*numbers, job.method, error, _BLOCKS, version("crossing"))).encode())
     return digest.hexdigest()
-
-
-class _Keeper:
-    """Keeps the state of a map on disk, whole or not at all, and takes up one that belongs to the same map."""
-
-    def __init__(self, path: Path | None, seconds: float, key: str) -> None:
-        self.path, self.seconds, self.key = path, seconds, key
-        self.written = time.monotonic()
-        self.finished: list[tuple[NDArray[np.float64], NDArray[np.float64]]] = []
-        self.state = self._read()
-
-    def _read(self) -> dict[str, Any] | None:
-        if self.path is None or not self.path.exists():
-            return None
-        try:
-            # A file of its own, since np.load leaves a damaged one open.
-            with self.path.open("rb") as file, np.load(file, allow_pickle=False) as archive:
-                state = {name: archive[name] for name in archive.files}
-        except (OSError, ValueError, EOFError, KeyError, BadZipFile):
-            return None
-        return state if str(state.get("key")) == self.key else None
-
-    def restore(self, number: int, shape: tuple[int, int]) -> tuple[NDArray[np.float64], NDArray[np.float64], int]:
-        """Sum, tally and next share of a pass."""
-        if self.state is not None and f"total_{number}" in self.state:
-            total = np.ascontiguousarray(self.state[f"total_{number}"])
-            return total, self.state[f"tally_{number}"].copy(), int(self.state[f"next_{number}"])
-        return np.zeros(shape), np.zeros(3), 0
-
-    def save(
-        self, number: int, total: NDArray[np.float64], tally: NDArray[np.float64], following: int, force: bool = False
-    ) -> None:
-        """Write the state if it is time, or if a pass has ended."""
-        if self.path is None or (not force and time.monotonic() - self.written < self.seconds):
-            return
-        state: dict[str, Any] = {
-            f"total_{number}": total,
-            f"tally_{number}": tally,
-            f"next_{number}": np.array(following),
-        }
-        for earlier, (sums, tallies) in enumerate(self.finished):
-            state |= {f"total_{earlier}": sums, f"tally_{earlier}": tallies, f"next_{earlier}": np.array(_BLOCKS)}
-        temporary = self.path.with_name(f"{self.path.name}.{os.getpid()}.tmp")
-        try:
-            with temporary.open("wb") as stream:
-                np.savez(stream, key=np.array(self.key), **state)
-            os.replace(temporary, self.path)
-        except OSError as error:
-            raise InputError(f"the checkpoint cannot be written ({error.strerror})", source=self.path) from None
-        finally:
-            temporary.unlink(missing_ok=True)
-        self.written = time.monotonic()
-        if force:
-            self.finished.append((total.copy(), tally.copy()))
-
-    def interrupt(
-        self, number: int, total: NDArray[np.float64], tally: NDArray[np.float64], following: int, first: int
-    ) -> None:
-        """Write the state once more before an interrupt goes on, if anything has been added to it."""
-        if following > first:
-            self.written = -np.inf
-            self.save(number, total, tally, following)
-
-    def remove(self) -> None:
-        """Take the file away."""
-        if self.path is not None:
-            self.path.unlink(missing_ok=True)

@@ -351,7 +351,9 @@ def evaluate(x, y, tree, roots, root_node, children, stars, out):
         for slot in range(near_start[leaf], near_start[leaf + 1]):
             star = near[slot]
             dx, dy = x[i] - star_x[star], y[i] - star_y[star]
-            inverse = complex(dx, -dy) / (dx * dx + dy * dy)
+            square = dx * dx + dy * dy
+            # Real quotients are not a number on a star; a complex one would be an error.
+            inverse = complex(dx / square, -dy / square)
             part = star_mass[star] * inverse
             value += part
             first -= part * inverse
