@@ -200,6 +200,23 @@ def test_rays_agree_with_areas(done: Run, folder: Path) -> None:
     assert np.sqrt(np.mean(pulls**2)) < 1.5
 
 
+def test_caustics_are_traced_if_asked_for(quick: dict[str, Any], folder: Path, capsys: Captured) -> None:
+    assert draw_map(folder, "--caustics", "--json") == 0
+    assert listing(folder) == LISTING | {"caustics.ecsv"}
+    found = strict_json(capsys.readouterr().out)["caustics"]
+    table = QTable.read(folder / "caustics.ecsv")
+    assert len(table) == found["vertices"] > 0
+    assert found["status"] == "ok"
+    half = 0.5 * quick["asked"]["width"]
+    assert np.abs(table["u"]).max() <= half * (1.0 + 1e-12)
+    # Without, there are none.
+    assert draw_map(folder) == 0
+    assert listing(folder) >= LISTING
+    assert "caustics  " not in capsys.readouterr().out
+    assert draw_map(folder, "--caustics") == 0
+    assert "caustics  " in capsys.readouterr().out
+
+
 def test_quiet_prints_nothing(quick: dict[str, Any], folder: Path, capsys: Captured) -> None:
     assert draw_map(folder, "--quiet") == 0
     assert capsys.readouterr() == ("", "")

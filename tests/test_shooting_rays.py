@@ -7,7 +7,7 @@ import pytest
 from twins import source_positions
 
 from crossing.shooting.field import StarField
-from crossing.shooting.rays import map_grid
+from crossing.shooting.rays import map_grid, scratch
 
 
 def field(gradient=None, accuracy=1e-9, seed=2):
@@ -24,7 +24,7 @@ def grid(stars, tree, leaf, nx, ny, scale, part=1.0):
     x0, y0 = tree.centre[leaf] - tree.half[leaf]
     dx, dy = size[0] / max(1, nx - 1), size[1] / max(1, ny - 1)
     u, v = np.full((ny + 2, nx + 3), np.nan), np.full((ny + 2, nx + 3), np.nan)
-    work = np.empty((2 * tree.real.shape[1], ny + 2))
+    work = scratch(tree.real.shape[1], max(nx, ny))
     map_grid(stars.lens_numbers, tree.arrays, leaf, stars.stars, x0, y0, dx, dy, nx, ny, scale, work, u, v)
     assert np.isnan(u[ny:]).all()
     assert np.isnan(v[:, nx:]).all()

@@ -14,12 +14,15 @@ from crossing.cli.options import add_shared, examples, json_text, out_folder
 
 if TYPE_CHECKING:
     from crossing.outputs import OutputFolder
+    from crossing.shooting.caustics import CausticNetwork
+    from crossing.shooting.field import StarField
     from crossing.shooting.magnification_map import MagnificationMap
     from crossing.shooting.mapping import MapPlan
 
 __all__ = ["add_arguments", "run"]
 
 _FILES = ("map.fits", "map.json", "statistics.ecsv", "map.png")
+_CAUSTICS = "caustics.ecsv"
 _CHECKPOINT = ".crossing-map-checkpoint.npz"
 _MOST_PIXELS = 50_000
 
@@ -55,6 +58,9 @@ def add_arguments(parser: argparse.ArgumentParser) -> None:
         action="store_true",
         default=None,
         help='keep the macro gradient, to map both images of a merging pair (default with side = "pair" only)',
+    )
+    parser.add_argument(
+        "--caustics", action="store_true", help="trace the caustics too: over the map, and as a table (caustics.ecsv)"
     )
     parser.add_argument("--plan", action="store_true", help="print what the map would take, and stop")
     add_shared(parser, "map")
@@ -92,7 +98,7 @@ def run(options: argparse.Namespace) -> int:
     require(event, "macro", "microlenses", purpose="crossing map")
     folder = OutputFolder(out_folder(options, "map"), "map", overwrite=options.overwrite)
     if not options.plan:
-        folder.check(_FILES)
+        folder.check(_files(options))
 
     from crossing.report.map import plan_text
     from crossing.shooting.from_event import local_setup
@@ -126,7 +132,17 @@ def run(options: argparse.Namespace) -> int:
         )
         return INTERRUPTED
     asked |= {"seed": options.seed, "model": options.model, "pair": options.pair}
-    return _deliver(options, folder, setup.label(chart, asked))
+    return _deliver(options, folder, setup.label(chart, asked), _traced(options, field, chart))
+
+
+def _files(options: argparse.Namespace) -> tuple[str, ...]:
+    return (*_FILES, _CAUSTICS) if options.caustics else _FILES
+
+
+def _traced(options: argparse.Namespace, field: StarField, chart: MagnificationMap) -> CausticNetwork | None:
+    from crossing.shooting.caustics import trace_caustics
+
+    return trace_caustics(field, chart.center, chart.width, height=chart.height) if options.caustics else None
 
 
 def _tell_plan(options: argparse.Namespace, plan: MapPlan) -> int:
@@ -155,10 +171,13 @@ def _made(path: Path) -> Iterator[None]:
                 place.rmdir()
 
 
-def _deliver(options: argparse.Namespace, folder: OutputFolder, chart: MagnificationMap) -> int:
+def _deliver(
+    options: argparse.Namespace, folder: OutputFolder, chart: MagnificationMap, network: CausticNetwork | None
+) -> int:
     """Write the files and tell what is in them; returns the exit status."""
     from crossing.report.fit import table_bytes
     from crossing.report.map import CAUTIONS, map_figure, map_text
+    from crossing.shooting.caustics import FLAGS as CAUSTIC_FLAGS
     from crossing.shooting.magnification_map import FLAGS
     from crossing.shooting.map_files import write_hdus
 
@@ -171,19 +190,25 @@ def _deliver(options: argparse.Namespace, folder: OutputFolder, chart: Magnifica
         "statistics": found.to_dict(),
         "cautions": list(CAUTIONS),
     }
+    if network is not None:
+        content["caustics"] = network.to_dict()
     document = json_text(content) + "\n"
     with folder.transaction() as files:
         write_hdus(chart, files.path("map.fits"))
         files.write_bytes("map.json", document.encode())
         files.write_bytes("statistics.ecsv", table_bytes(found.to_table()))
-        map_figure(chart, found).savefig(files.path("map.png"), dpi=150, format="png")
+        if network is not None:
+            files.write_bytes(_CAUSTICS, table_bytes(network.to_table()))
+        map_figure(chart, found, network).savefig(files.path("map.png"), dpi=150, format="png")
     if options.json:
         sys.stdout.write(document)
     elif not options.quiet:
-        print(map_text(chart, found))
-        print(f"\nwritten to {folder.path}: {', '.join(_FILES)}")
-    if chart.flags:
-        reasons = "; ".join(f"{name}: {FLAGS[name]}" for name in chart.flags)
+        print(map_text(chart, found, network))
+        print(f"\nwritten to {folder.path}: {', '.join(_files(options))}")
+    flags = {name: FLAGS[name] for name in chart.flags}
+    flags |= {} if network is None else {name: CAUSTIC_FLAGS[name] for name in network.flags}
+    if flags:
+        reasons = "; ".join(f"{name}: {meaning}" for name, meaning in flags.items())
         print(f"crossing map: {options.file}: done, but flagged: {reasons}", file=sys.stderr)
         return 3
     return 0

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Final
 
+from crossing.shooting.caustics import FLAGS as CAUSTIC_FLAGS
 from crossing.shooting.magnification_map import FLAGS
 from crossing.shooting.map_figure import figure_size, plot_map, plot_statistics
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
+    from crossing.shooting.caustics import CausticNetwork
     from crossing.shooting.magnification_map import MagnificationMap
     from crossing.shooting.mapping import MapPlan
     from crossing.shooting.statistics import MapStatistics
@@ -28,8 +30,8 @@ _WIDE: Final = 1.9
 _PANEL: Final = (5.4, 4.2)
 
 
-def map_figure(chart: MagnificationMap, found: MapStatistics) -> Figure:
-    """The map, and beside it the distribution of its magnifications."""
+def map_figure(chart: MagnificationMap, found: MapStatistics, network: CausticNetwork | None = None) -> Figure:
+    """The map, with its caustics where they are given, and beside it the distribution of its magnifications."""
     from matplotlib.figure import Figure
 
     width, height = figure_size(chart)
@@ -39,7 +41,7 @@ def map_figure(chart: MagnificationMap, found: MapStatistics) -> Figure:
     else:
         figure = Figure(figsize=(width + _PANEL[0], height), layout="constrained")
         left, right = figure.subplots(1, 2, width_ratios=(width, _PANEL[0]))
-    plot_map(chart, left)
+    plot_map(chart, left, network)
     plot_statistics(found, right)
     name = chart.description.get("event", {}).get("name")
     left.set_title("magnification map" if name is None else name, loc="left", fontsize="medium")
@@ -58,7 +60,7 @@ def _warning(chart: MagnificationMap) -> str:
     return f"  [{chart.status}]" if chart.flags else ""
 
 
-def map_text(chart: MagnificationMap, found: MapStatistics) -> str:
+def map_text(chart: MagnificationMap, found: MapStatistics, network: CausticNetwork | None = None) -> str:
     """Summary for a terminal: flags first, then the lens, the map and what limits it."""
     told, event = chart.description.get("field", {}), chart.description.get("event", {})
     lines = [f"{event.get('name', 'star field')}: magnification map"]
@@ -78,6 +80,13 @@ def map_text(chart: MagnificationMap, found: MapStatistics) -> str:
         f"  map                  {chart.width:g} x {chart.height:g} Einstein radii of one solar mass, "
         f"{chart.pixels[0]} x {chart.pixels[1]} pixels",
     ]
+    if network is not None:
+        lines += [f"  flag {name}: {CAUSTIC_FLAGS[name]}" for name in network.flags]
+        per_area = network.length() / (network.width * network.height)
+        lines.append(
+            f"  caustics             {len(network)} curves, {len(network.cusps)} cusps, {per_area:.4g} Einstein radii "
+            "long per unit area"
+        )
     if chart.parsec_per_einstein is not None:
         lines.append(f"  Einstein radius      {chart.parsec_per_einstein:.4g} pc at the source")
     if chart.days_per_einstein is not None:

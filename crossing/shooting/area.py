@@ -10,9 +10,10 @@ from __future__ import annotations
 import numpy as np
 
 from crossing.shooting.compiled import kernel
-from crossing.shooting.rays import map_grid
+from crossing.shooting.edges import add_edge, add_points
+from crossing.shooting.rays import map_grid, scratch
 
-__all__ = ["LOOK", "TILE", "deposit_leaves", "running_sum"]
+__all__ = ["LOOK", "TILE", "deposit_leaves"]
 
 LOOK = 8
 """Cells on a side in the first look at a leaf."""
@@ -25,87 +26,10 @@ _MOST_FINER = 64
 # between them, so that their errors cancel where those of a cut cell do not.
 _SLACK = 4.0
 _PIECES = 4
-_HIGHEST_WEIGHT = 12.0
+_HIGHEST_WEIGHT = 1.5
 _SHARE = 0.1
 # A triangle that would be magnified more than this is laid down as points along itself: see the design of the sum.
-_MOST_DENSITY = 1e7
-
-
-@kernel
-def _edge(buffer, x0, y0, x1, y1, weight):
-    """Add one directed edge, in pixels, to the buffer that the running sum turns into covered area times weight."""
-    rows, columns = buffer.shape[0], buffer.shape[1] - 1
-    if y0 == y1 or weight == 0.0:
-        return
-    if y0 < y1:
-        weight = -weight
-    else:
-        x0, y0, x1, y1 = x1, y1, x0, y0
-    if y1 <= 0.0 or y0 >= rows or (x0 >= columns and x1 >= columns):
-        return
-    slope = (x1 - x0) / (y1 - y0)
-    y, x = y0, x0
-    if y < 0.0:
-        x -= y * slope
-        y = 0.0
-    top = min(y1, float(rows))
-    row = int(y)
-    while y < top:
-        y_next = min(row + 1.0, top)
-        x_next = x1 if y_next == y1 else x0 + (y_next - y0) * slope
-        _row_piece(buffer, row, columns, min(x, x_next), max(x, x_next), weight * (y_next - y))
-        x, y = x_next, y_next
-        row += 1
-
-
-@kernel
-def _row_piece(buffer, row, columns, low, high, part):
-    """An edge piece inside one row, from column coordinate `low` to `high`, standing for the height `part`."""
-    if high <= 0.0:
-        buffer[row, 0] += part
-        return
-    if low >= columns:
-        return
-    if low >= 0.0:
-        column = int(low)
-        if high <= column + 1.0:
-            middle = 0.5 * (low + high) - column
-            buffer[row, column] += part * (1.0 - middle)
-            buffer[row, column + 1] += part * middle
-            return
-    per_column = part / (high - low)
-    if low < 0.0:
-        buffer[row, 0] -= low * per_column
-        low = 0.0
-    high = min(high, float(columns))
-    column = int(low)
-    while low < high:
-        end = min(column + 1.0, high)
-        piece, middle = per_column * (end - low), 0.5 * (low + end) - column
-        buffer[row, column] += piece * (1.0 - middle)
-        buffer[row, column + 1] += piece * middle
-        low = end
-        column += 1
-
-
-@kernel
-def _points(buffer, ax, ay, bx, by, cx, cy, area):
-    """Lay the area of a degenerate triangle down as points along its longest edge."""
-    lab = (bx - ax) ** 2 + (by - ay) ** 2
-    lbc = (cx - bx) ** 2 + (cy - by) ** 2
-    lca = (ax - cx) ** 2 + (ay - cy) ** 2
-    if lbc >= lab and lbc >= lca:
-        ax, ay, bx, by = bx, by, cx, cy
-    elif lca >= lab:
-        bx, by = cx, cy
-    length = np.sqrt(max(lab, lbc, lca))
-    count = min(1 + int(2.0 * length), 100_000)
-    for i in range(count):
-        f = (i + 0.5) / count
-        column, row = np.floor(ax + f * (bx - ax)), np.floor(ay + f * (by - ay))
-        if 0 <= row < buffer.shape[0] and 0 <= column < buffer.shape[1] - 1:
-            buffer[int(row), int(column)] += area / count
-            buffer[int(row), int(column) + 1] -= area / count
+_MOST_DENSITY = 1e6
 
 
 @kernel
@@ -136,7 +60,7 @@ def deposit_leaves(leaves, lens, tree, stars, scale, spacing, tolerance, mean, b
     """
     centre, half, _, real, _, near_start, near_all = tree
     side = TILE + 1
-    work = np.empty((2 * real.shape[1], side))
+    work = scratch(real.shape[1], side)
     u, v = np.empty((side, side)), np.empty((side, side))
     one, two = np.empty((side, side)), np.empty((side, side))
     forced, state = np.zeros((side, side), dtype=np.bool_), np.zeros((LOOK, LOOK), dtype=np.int8)
@@ -176,8 +100,8 @@ def deposit_leaves(leaves, lens, tree, stars, scale, spacing, tolerance, mean, b
                 stack, depth, forced, good, u, v, nx, ny, box, area, mean, tolerance, allowed, stars, near, escape,
                 rows, columns, 1e-12 * half[leaf, 0], tally,
             )  # fmt: skip
-            tally[1] += _densities(buffer, nx, ny, u, v, good, one, two, area, line)
-            _edges(buffer, nx, ny, u, v, good, one, two, line)
+            tally[1] += _densities(buffer, nx, ny, u, v, good, one, two, area, line, allowed < _SLACK)
+            _edges(buffer, nx, ny, u, v, good, one, two, line, allowed < _SLACK)
 
 
 @kernel
@@ -352,7 +276,7 @@ def _bulge(line, u, v, i, j, along_row, n):
 
 
 @kernel
-def _densities(buffer, nx, ny, u, v, good, one, two, area, line):
+def _densities(buffer, nx, ny, u, v, good, one, two, area, line, straight):
     """Image area over signed source area of the two triangles of every good cell; returns the number of good cells.
 
     Edges towards cells that are not good follow the curve, so that cells of different sizes meet without gaps.
@@ -370,23 +294,23 @@ def _densities(buffer, nx, ny, u, v, good, one, two, area, line):
             lower = 0.5 * ((bx - ax) * (cy - ay) - (cx - ax) * (by - ay))
             upper = 0.5 * ((cx - ax) * (dy - ay) - (dx - ax) * (cy - ay))
             extra_lower, extra_upper = 0.0, 0.0
-            if not good[i, j + 1]:
+            if not (good[i, j + 1] or (straight and i == 0)):
                 extra_lower += _bulge(line, u, v, i, j, True, nx)
-            if not good[i + 1, j + 2]:
+            if not (good[i + 1, j + 2] or (straight and j == nx - 1)):
                 extra_lower += _bulge(line, u, v, i, j + 1, False, ny)
-            if not good[i + 2, j + 1]:
+            if not (good[i + 2, j + 1] or (straight and i == ny - 1)):
                 extra_upper -= _bulge(line, u, v, i + 1, j, True, nx)
-            if not good[i + 1, j]:
+            if not (good[i + 1, j] or (straight and j == 0)):
                 extra_upper -= _bulge(line, u, v, i, j, False, ny)
             # A triangle that is thinner than its edges are curved has no density worth the name.
             if abs(lower) * _MOST_DENSITY > area and abs(extra_lower) < 0.5 * abs(lower):
                 one[i, j] = area / (lower + extra_lower)
             else:
-                _points(buffer, ax, ay, bx, by, cx, cy, area)
+                add_points(buffer, ax, ay, bx, by, cx, cy, area)
             if abs(upper) * _MOST_DENSITY > area and abs(extra_upper) < 0.5 * abs(upper):
                 two[i, j] = area / (upper + extra_upper)
             else:
-                _points(buffer, ax, ay, cx, cy, dx, dy, area)
+                add_points(buffer, ax, ay, cx, cy, dx, dy, area)
     return laid
 
 
@@ -395,33 +319,31 @@ def _open_edge(buffer, line, u, v, i, j, along_row, n, weight):
     """Add an edge as its curve."""
     _curve(line, u, v, i, j, along_row, n)
     for piece in range(_PIECES):
-        _edge(buffer, line[0, piece], line[1, piece], line[0, piece + 1], line[1, piece + 1], weight)
+        add_edge(buffer, line[0, piece], line[1, piece], line[0, piece + 1], line[1, piece + 1], weight)
 
 
 @kernel
-def _edges(buffer, nx, ny, u, v, good, one, two, line):
+def _edges(buffer, nx, ny, u, v, good, one, two, line, straight):
     """Every edge of a block once, with the difference of the densities on its two sides."""
     for i in range(ny + 1):
         for j in range(nx):
             below, above = good[i, j + 1], good[i + 1, j + 1]
-            if above and below:
-                _edge(buffer, u[i, j], v[i, j], u[i, j + 1], v[i, j + 1], one[i, j] - two[i - 1, j])
-            elif above:
-                _open_edge(buffer, line, u, v, i, j, True, nx, one[i, j])
-            elif below:
-                _open_edge(buffer, line, u, v, i, j, True, nx, -two[i - 1, j])
+            weight = (one[i, j] if above else 0.0) - (two[i - 1, j] if below else 0.0)
+            if (above and below) or (straight and (i == 0 or i == ny)):
+                add_edge(buffer, u[i, j], v[i, j], u[i, j + 1], v[i, j + 1], weight)
+            elif above or below:
+                _open_edge(buffer, line, u, v, i, j, True, nx, weight)
     for i in range(ny):
         for j in range(nx + 1):
             left, right = good[i + 1, j], good[i + 1, j + 1]
-            if left and right:
-                _edge(buffer, u[i, j], v[i, j], u[i + 1, j], v[i + 1, j], one[i, j - 1] - two[i, j])
-            elif left:
-                _open_edge(buffer, line, u, v, i, j, False, ny, one[i, j - 1])
-            elif right:
-                _open_edge(buffer, line, u, v, i, j, False, ny, -two[i, j])
+            weight = (one[i, j - 1] if left else 0.0) - (two[i, j] if right else 0.0)
+            if (left and right) or (straight and (j == 0 or j == nx)):
+                add_edge(buffer, u[i, j], v[i, j], u[i + 1, j], v[i + 1, j], weight)
+            elif left or right:
+                _open_edge(buffer, line, u, v, i, j, False, ny, weight)
         for j in range(nx):
             if good[i + 1, j + 1]:
-                _edge(buffer, u[i, j], v[i, j], u[i + 1, j + 1], v[i + 1, j + 1], two[i, j] - one[i, j])
+                add_edge(buffer, u[i, j], v[i, j], u[i + 1, j + 1], v[i + 1, j + 1], two[i, j] - one[i, j])
 
 
 @kernel
@@ -473,13 +395,3 @@ def _thrown_off(x, y, hx, hy, stars, near, escape):
         if far_x * far_x + far_y * far_y < escape[slot] * escape[slot]:
             return True
     return False
-
-
-@kernel
-def running_sum(buffer, out, factor):
-    """Turn the buffer into the map, row by row."""
-    for row in range(out.shape[0]):
-        total = 0.0
-        for column in range(out.shape[1]):
-            total += buffer[row, column]
-            out[row, column] = total * factor

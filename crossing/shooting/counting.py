@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from crossing.shooting.compiled import kernel
-from crossing.shooting.rays import map_grid
+from crossing.shooting.rays import map_grid, scratch
 
 __all__ = ["count_leaves"]
 
@@ -30,7 +30,7 @@ def count_leaves(leaves, lens, tree, stars, scale, step_x, step_y, out, tally):
         The first entry is raised by the number of rays.
     """
     centre, half, real = tree[0], tree[1], tree[3]
-    work = np.empty((2 * real.shape[1], _TILE))
+    work = scratch(real.shape[1], _TILE)
     u, v = np.empty((_TILE, _TILE)), np.empty((_TILE, _TILE))
     rows, columns = out.shape
     for leaf in leaves:

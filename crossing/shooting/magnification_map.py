@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from astropy.table import QTable
     from matplotlib.axes import Axes
 
+    from crossing.shooting.caustics import CausticNetwork
     from crossing.shooting.statistics import MapStatistics
 
 __all__ = ["FLAGS", "MagnificationMap"]
@@ -241,17 +242,19 @@ class MagnificationMap:
 
         return sample_line(self, start, end, samples)
 
-    def plot(self, ax: Axes | None = None) -> Axes:
+    def plot(self, ax: Axes | None = None, caustics: CausticNetwork | None = None) -> Axes:
         """Draw the map in colours of log magnification, with a bar in Einstein radii and days where these are known.
 
         Parameters
         ----------
         ax : matplotlib.axes.Axes, optional
             Where to draw; a new figure if None.
+        caustics : CausticNetwork, optional
+            Caustics of the same field, drawn over the map.
         """
         from crossing.shooting.map_figure import plot_map
 
-        return plot_map(self, ax)
+        return plot_map(self, ax, caustics)
 
     def to_dict(self) -> dict[str, Any]:
         """Everything but the arrays, as JSON can hold it."""

@@ -1,21 +1,24 @@
-"""Draw a magnification map, and its statistics, on one pair of axes each."""
+"""Draw a magnification map, its statistics, and networks of caustics, on one pair of axes each."""
 
 from __future__ import annotations
 
 from math import floor, log10
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 from numpy.typing import NDArray
+
+from crossing.errors import InputError
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.axis import Axis
 
+    from crossing.shooting.caustics import CausticNetwork
     from crossing.shooting.magnification_map import MagnificationMap
     from crossing.shooting.statistics import MapStatistics
 
-__all__ = ["figure_size", "nice_length", "plot_map", "plot_statistics"]
+__all__ = ["figure_size", "nice_length", "plot_caustics", "plot_map", "plot_statistics"]
 
 _COLOURS = "cividis"  # perceptually uniform, also for colour-blind readers
 _MOST_PIXELS = 1500
@@ -23,9 +26,11 @@ _SHARES = (0.001, 0.999)
 _BAR = 0.3
 _WIDE = 1.2
 _DAYS_PER_YEAR = 365.25
+_CURVE, _CUSP, _OVER_MAP = "#0072B2", "#D55E00", "#D55E00"
+_MOST_MARKS = 300
 
 
-def plot_map(chart: MagnificationMap, ax: Axes | None = None) -> Axes:
+def plot_map(chart: MagnificationMap, ax: Axes | None = None, caustics: CausticNetwork | None = None) -> Axes:
     """Draw a map in colours of log magnification, with a colour bar and a bar of length.
 
     Parameters
@@ -34,6 +39,8 @@ def plot_map(chart: MagnificationMap, ax: Axes | None = None) -> Axes:
         Map.
     ax : matplotlib.axes.Axes, optional
         Where to draw; a new figure if None.
+    caustics : CausticNetwork, optional
+        Caustics of the same field, drawn over the map.
 
     Returns
     -------
@@ -63,7 +70,70 @@ def plot_map(chart: MagnificationMap, ax: Axes | None = None) -> Axes:
     ax.set_xlabel(r"$u$  [$\theta_E$ of 1 M$_\odot$]")
     ax.set_ylabel(r"$v$  [$\theta_E$]")
     _scale_bar(chart, ax)
+    if caustics is not None:
+        _draw_curves(caustics, ax, "source", _OVER_MAP, 0.45)
+        ax.set(xlim=(left, left + width), ylim=(bottom, bottom + height))
     return ax
+
+
+def plot_caustics(
+    network: CausticNetwork, ax: Axes | None = None, plane: Literal["source", "image"] = "source"
+) -> Axes:
+    """Draw caustics with their cusps, or critical curves.
+
+    Parameters
+    ----------
+    network : CausticNetwork
+        Curves.
+    ax : matplotlib.axes.Axes, optional
+        Where to draw; a new figure if None.
+    plane : {"source", "image"}
+        Caustics in the source plane, or critical curves in the image plane.
+
+    Returns
+    -------
+    matplotlib.axes.Axes
+
+    Raises
+    ------
+    InputError
+        If `plane` is neither.
+    """
+    if plane not in ("source", "image"):
+        raise InputError(f"`plane` must be source or image, got {plane!r}")
+    if ax is None:
+        from matplotlib.figure import Figure
+
+        wide = 7.0 if plane == "source" else 9.0
+        ax = Figure(figsize=(wide, 6.0), layout="constrained").add_subplot()
+    _draw_curves(network, ax, plane, _CURVE, 0.7)
+    if plane == "image":  # a patch of the image plane may be hundreds of times longer than it is high
+        ax.autoscale_view()
+        ax.set(xlabel=r"$x$  [$\theta_E$ of 1 M$_\odot$]", ylabel=r"$y$  [$\theta_E$]")
+        return ax
+    u, v = network.center
+    ax.set(
+        xlim=(u - 0.5 * network.width, u + 0.5 * network.width),
+        ylim=(v - 0.5 * network.height, v + 0.5 * network.height),
+        xlabel=r"$u$  [$\theta_E$ of 1 M$_\odot$]",
+        ylabel=r"$v$  [$\theta_E$]",
+        aspect="equal",
+    )
+    return ax
+
+
+def _draw_curves(
+    network: CausticNetwork, ax: Axes, plane: Literal["source", "image"], colour: str, thickness: float
+) -> None:
+    from matplotlib.collections import LineCollection
+
+    source = plane == "source"
+    lines = [np.column_stack((one.u, one.v) if source else (one.x, one.y)) for one in network.curves]
+    ax.add_collection(LineCollection(lines, colors=colour, linewidths=thickness))
+    marks = [one.cusps if source else one.critical_cusps for one in network.curves]
+    cusps = np.concatenate([np.empty((0, 2)), *marks])
+    if 0 < len(cusps) <= _MOST_MARKS:
+        ax.plot(cusps[:, 0], cusps[:, 1], ls="", marker="D", ms=3.0, mfc="none", mec=_CUSP, mew=0.8, label="cusps")
 
 
 def figure_size(chart: MagnificationMap) -> tuple[float, float]:

@@ -19,10 +19,11 @@ from numpy.typing import NDArray
 
 from crossing.errors import InputError
 from crossing.progress import track
-from crossing.shooting.area import deposit_leaves, running_sum
+from crossing.shooting.area import deposit_leaves
 from crossing.shooting.checkpoint import Keeper
 from crossing.shooting.compiled import announce_compilation
 from crossing.shooting.counting import count_leaves
+from crossing.shooting.edges import running_sum
 from crossing.shooting.magnification_map import MagnificationMap
 
 if TYPE_CHECKING:
@@ -41,7 +42,7 @@ _MOST_PASSES = 3
 _SLACK = 1.2
 _LARGEST_STEP = 30.0
 # Sag times density that gives about the relative error 1, and the largest cell in pixels; see DEVELOPERS.md.
-_TOLERANCE = 1.2
+_TOLERANCE = 0.5
 _LARGEST_CELL = 16.0
 _CHECKPOINT_SECONDS = 15.0
 

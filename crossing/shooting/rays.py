@@ -1,7 +1,8 @@
-"""Where rays land: the lens map on small grids of the image plane, row by row.
+"""Where rays land: the lens map on small grids of the image plane.
 
 Along a row the series of far stars is a polynomial with real argument, so that a ray costs two real Horner chains and a
-few near stars. Rows are evaluated together and the loops run over rays: compilers turn both into vector code.
+few near stars. A grid much smaller than its leaf has a short series of its own, which most near stars join, too. Loops
+run over rays, in whole vectors: compilers turn them into vector code.
 """
 
 from __future__ import annotations
@@ -9,8 +10,20 @@ from __future__ import annotations
 import numpy as np
 
 from crossing.shooting.compiled import kernel
+from crossing.shooting.tree import RATIO
 
-__all__ = ["map_grid"]
+__all__ = ["map_grid", "scratch"]
+
+# Terms of the series of a small grid, rays that are evaluated together, and the numbers of a vector.
+_FEW = 8
+_CHUNK = 128
+_VECTOR = 8
+
+
+@kernel
+def scratch(order, side):
+    """Work space of `map_grid` for series of `order` terms and grids of up to `side` rays a side."""
+    return np.empty((2 * order + 4, max(_CHUNK, side + _VECTOR)))
 
 
 @kernel
@@ -30,8 +43,8 @@ def _shift_rows(real, imag, offset, rows, u, v):
 
 
 @kernel
-def _row(distance, count, a, b, order, near_x, near_y, near_mass, near_count, u, v):
-    """Polynomials a, b plus near stars at `count` distances along one row."""
+def _row(distance, count, a, b, order, u, v):
+    """Polynomials a, b at `count` distances along one row."""
     k = order - 8
     a0, a1, a2, a3, a4, a5, a6, a7 = a[k], a[k + 1], a[k + 2], a[k + 3], a[k + 4], a[k + 5], a[k + 6], a[k + 7]
     b0, b1, b2, b3, b4, b5, b6, b7 = b[k], b[k + 1], b[k + 2], b[k + 3], b[k + 4], b[k + 5], b[k + 6], b[k + 7]
@@ -46,6 +59,11 @@ def _row(distance, count, a, b, order, near_x, near_y, near_mass, near_count, u,
             x, s, t = distance[j], u[j], v[j]
             u[j] = (((((((s * x + a7) * x + a6) * x + a5) * x + a4) * x + a3) * x + a2) * x + a1) * x + a0
             v[j] = (((((((t * x + b7) * x + b6) * x + b5) * x + b4) * x + b3) * x + b2) * x + b1) * x + b0
+
+
+@kernel
+def _add_near_row(distance, count, near_x, near_y, near_mass, near_count, u, v):
+    """Subtract the deflection by stars at a height near_y above a row."""
     i = 0
     while i + 1 < near_count:
         # Two stars share one division.
@@ -69,6 +87,32 @@ def _row(distance, count, a, b, order, near_x, near_y, near_mass, near_count, u,
 
 
 @kernel
+def _add_near(x, y, count, near_x, near_y, near_mass, near_count, u, v):
+    """Subtract the deflection by near stars at `count` points."""
+    i = 0
+    while i + 1 < near_count:
+        # Two stars share one division.
+        xa, ya, ma = near_x[i], near_y[i], near_mass[i]
+        xb, yb, mb = near_x[i + 1], near_y[i + 1], near_mass[i + 1]
+        for j in range(count):
+            da, db = x[j] - xa, x[j] - xb
+            ea, eb = y[j] - ya, y[j] - yb
+            sa, sb = da * da + ea * ea, db * db + eb * eb
+            both = 1.0 / (sa * sb)
+            qa, qb = ma * sb * both, mb * sa * both
+            u[j] = u[j] - da * qa - db * qb
+            v[j] = v[j] - ea * qa - eb * qb
+        i += 2
+    if i < near_count:
+        xa, ya, ma = near_x[i], near_y[i], near_mass[i]
+        for j in range(count):
+            da, ea = x[j] - xa, y[j] - ya
+            qa = ma / (da * da + ea * ea)
+            u[j] = u[j] - da * qa
+            v[j] = v[j] - ea * qa
+
+
+@kernel
 def map_grid(lens, tree, leaf, stars, x0, y0, dx, dy, nx, ny, scale, work, u, v):
     """Source positions of a grid of rays in one leaf.
 
@@ -86,31 +130,47 @@ def map_grid(lens, tree, leaf, stars, x0, y0, dx, dy, nx, ny, scale, work, u, v)
         First ray, spacings and numbers of rays.
     scale : (3,) ndarray
         Positions are returned as (u - scale[0]) * scale[2], (v - scale[1]) * scale[2].
-    work : (2 * order, >= ny) ndarray
-        Scratch space.
+    work : ndarray
+        See `scratch`.
     u, v : (>= ny, >= nx) ndarray
         Results.
     """
-    centre, _, inside, real, imag, near_start, near = tree
-    star_x, star_y, star_mass = stars
+    centre, half, inside, real, imag, near_start, near = tree
     order = real.shape[1]
-    cx, cy = centre[leaf, 0], centre[leaf, 1]
+    across, up = 0.5 * (nx - 1) * dx, 0.5 * (ny - 1) * dy
+    x, y = x0 + across - centre[leaf, 0], y0 + up - centre[leaf, 1]
+    # Distance of far stars, in sizes of the grid, beyond which few terms are as good as the leaf's many are for it.
+    size = np.hypot(across, up)
+    worst = 0.5 * order * (order - 1) * RATIO ** -(order - 2)
+    reach = size * (0.5 * _FEW * (_FEW - 1) / worst) ** (1.0 / (_FEW - 2))
+    sheet = lens[4] if inside[leaf] else 0.0
+    own = near[near_start[leaf] : near_start[leaf + 1]]
+    if order > _FEW and reach < RATIO * np.hypot(half[leaf, 0], half[leaf, 1]) - np.hypot(x, y):
+        box = (centre[leaf, 0] + x, centre[leaf, 1] + y, x0, y0, dx, dy)
+        _small(lens, sheet, real[leaf], imag[leaf], x, y, stars, own, reach, box, nx, ny, scale, work, u, v)
+    else:
+        _large(lens, sheet, real[leaf], imag[leaf], centre[leaf], stars, own, x0, y0, dx, dy, nx, ny, scale, work, u, v)
+
+
+@kernel
+def _large(lens, sheet, real, imag, centre, stars, own, x0, y0, dx, dy, nx, ny, scale, work, u, v):
+    """A grid by the leaf's own series."""
+    order = len(real)
+    cx, cy = centre[0], centre[1]
     a, b = work[:order], work[order : 2 * order]
-    distance, offset = np.empty(nx), np.empty(ny)
+    distance, offset, line_u, line_v = work[2 * order], work[2 * order + 1], work[2 * order + 2], work[2 * order + 3]
     row_a, row_b = np.empty(order), np.empty(order)
-    start, count = near_start[leaf], near_start[leaf + 1] - near_start[leaf]
+    count, whole = len(own), (nx + _VECTOR - 1) // _VECTOR * _VECTOR
     near_x, near_y, near_mass, below = np.empty(count), np.empty(count), np.empty(count), np.empty(count)
     for i in range(count):
-        star = near[start + i]
-        near_x[i] = star_x[star] - cx
-        near_y[i] = star_y[star]
-        near_mass[i] = star_mass[star] * scale[2]
-    for j in range(nx):
+        near_x[i] = stars[0][own[i]] - cx
+        near_y[i] = stars[1][own[i]]
+        near_mass[i] = stars[2][own[i]] * scale[2]
+    for j in range(whole):
         distance[j] = x0 + j * dx - cx
     for r in range(ny):
         offset[r] = y0 + r * dy - cy
-    _shift_rows(real[leaf], imag[leaf], offset, ny, a, b)
-    sheet = lens[4] if inside[leaf] else 0.0
+    _shift_rows(real, imag, offset, ny, a, b)
     lam_t, lam_r, gx, gy = lens[0] + sheet, lens[1] + sheet, lens[2], lens[3]
     for r in range(ny):
         y = cy + offset[r]
@@ -127,4 +187,95 @@ def map_grid(lens, tree, leaf, stars, x0, y0, dx, dy, nx, ny, scale, work, u, v)
             row_b[k] *= scale[2]
         for i in range(count):
             below[i] = near_y[i] - y
-        _row(distance, nx, row_a, row_b, order, near_x, below, near_mass, count, u[r], v[r])
+        _row(distance, whole, row_a, row_b, order, line_u, line_v)
+        _add_near_row(distance, whole, near_x, below, near_mass, count, line_u, line_v)
+        for j in range(nx):
+            u[r, j], v[r, j] = line_u[j], line_v[j]
+
+
+@kernel
+def _short_series(real, imag, x, y, a, b):
+    """First terms of a series about a point at (x, y) from its centre."""
+    a[:] = 0.0
+    b[:] = 0.0
+    for n in range(len(real) - 1, -1, -1):
+        for k in range(len(a) - 1, 0, -1):
+            a[k], b[k] = a[k] * x - b[k] * y + a[k - 1], a[k] * y + b[k] * x + b[k - 1]
+        a[0], b[0] = a[0] * x - b[0] * y + real[n], a[0] * y + b[0] * x + imag[n]
+
+
+@kernel
+def _small(lens, sheet, real, imag, x, y, stars, own, reach, box, nx, ny, scale, work, u, v):
+    """A grid much smaller than its leaf: a short series about its own centre, for all stars beyond `reach`, too."""
+    cx, cy, x0, y0, dx, dy = box
+    series, near = np.empty((2, _FEW)), np.empty((3, len(own)))
+    a, b = series[0], series[1]
+    _short_series(real, imag, x, y, a, b)
+    count = 0
+    for star in own:
+        dist_x, dist_y = stars[0][star] - cx, stars[1][star] - cy
+        square = dist_x * dist_x + dist_y * dist_y
+        if square < reach * reach:
+            near[0, count], near[1, count], near[2, count] = dist_x, dist_y, stars[2][star] * scale[2]
+            count += 1
+            continue
+        ir, ii = dist_x / square, -dist_y / square
+        tr, ti = -stars[2][star] * ir, -stars[2][star] * ii
+        for k in range(_FEW):
+            a[k] += tr
+            b[k] += ti
+            tr, ti = tr * ir - ti * ii, tr * ii + ti * ir
+    lam_t, lam_r, gx, gy = lens[0] + sheet, lens[1] + sheet, lens[2], lens[3]
+    # The smooth map about the centre, but for its second derivatives, is a0, ax x + ay y and b0, bx x + by y.
+    smooth = (
+        scale[2] * (lam_t * cx + 0.5 * gx * cx * cx + gy * cx * cy - scale[0]),
+        scale[2] * (lam_t + gx * cx + gy * cy),
+        scale[2] * gy * cx,
+        scale[2] * (lam_r * cy + 0.5 * gy * cx * cx - scale[1]),
+        scale[2] * lam_r,
+        scale[2] * 0.5 * gx,
+        scale[2] * gy,
+    )
+    for k in range(_FEW):
+        a[k] *= -scale[2]
+        b[k] *= scale[2]
+    first = work.shape[0] - 4
+    px, py, line_u, line_v = work[first], work[first + 1], work[first + 2], work[first + 3]
+    held, row, column = 0, 0, 0
+    for r in range(ny):
+        for j in range(nx):
+            px[held], py[held] = x0 + j * dx - cx, y0 + r * dy - cy
+            held += 1
+            if held < _CHUNK and (r < ny - 1 or j < nx - 1):
+                continue
+            whole = (held + _VECTOR - 1) // _VECTOR * _VECTOR
+            px[held:whole] = px[0]
+            py[held:whole] = py[0]
+            _short(px, py, whole, a, b, smooth, line_u, line_v)
+            _add_near(px, py, whole, near[0], near[1], near[2], count, line_u, line_v)
+            for i in range(held):
+                u[row, column], v[row, column] = line_u[i], line_v[i]
+                column += 1
+                if column == nx:
+                    row, column = row + 1, 0
+            held = 0
+
+
+@kernel
+def _short(px, py, count, a, b, smooth, u, v):
+    """A series of `_FEW` terms, a = -Re and b = Im, and the smooth map at `count` points."""
+    u0, ux, uy, v0, vy, half_gx, gy = smooth
+    a0, a1, a2, a3, a4, a5, a6, a7 = a[0], a[1], a[2], a[3], a[4], a[5], a[6], a[7]
+    b0, b1, b2, b3, b4, b5, b6, b7 = b[0], b[1], b[2], b[3], b[4], b[5], b[6], b[7]
+    u0, v0 = u0 + a0, v0 + b0
+    for j in range(count):
+        x, y = px[j], py[j]
+        # -conj of the series: (s - i t)(x - i y) and so on, with t = Im.
+        s, t = a7 * x + b7 * y + a6, b7 * x - a7 * y + b6
+        s, t = s * x + t * y + a5, t * x - s * y + b5
+        s, t = s * x + t * y + a4, t * x - s * y + b4
+        s, t = s * x + t * y + a3, t * x - s * y + b3
+        s, t = s * x + t * y + a2, t * x - s * y + b2
+        s, t = s * x + t * y + a1, t * x - s * y + b1
+        u[j] = s * x + t * y + u0 + (ux + half_gx * x + gy * y) * x + uy * y
+        v[j] = t * x - s * y + v0 + vy * y + (uy + 0.5 * gy * x) * x

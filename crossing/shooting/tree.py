@@ -2,12 +2,15 @@
 
 The conjugate deflection of a point mass, m / (z - z_i), is analytic away from it. A cell keeps the summed series of all
 stars that are at least `RATIO` of its half-diagonals away, and lists the nearer ones. Cells are made from the root
-downward: a child shifts its parent's series and adds the stars that have just become far, N log N in all.
+downward: a child shifts its parent's series and adds the stars that have just become far, N log N in all. They are
+walked through twice, first for their shape alone, so that the second walk writes the leaves where they stay.
 """
 
 from __future__ import annotations
 
 import itertools
+import os
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any
 
@@ -25,8 +28,14 @@ BLOCK = 8
 """Orders are multiples of this, for the kernels' inner loops."""
 
 # A cell with no more near stars than this is a leaf; one this deep is a leaf whatever it holds.
-_MOST_NEAR = 6
+_MOST_NEAR = 10
 _DEPTH = 120
+# Regions are cut into more parts while there are more stars than this to each, for threads.
+_SINGLE_PART = 10_000
+_MOST_PARTS = 16
+_CURVE = 1024
+# Stars whose powers are added side by side.
+_LANES = 16
 _CORNER_SIZE = 1e-9
 # Powers of the inverse size of a cell must stay numbers: smaller cells would have no series.
 _LARGEST_POWER = 1e280
@@ -106,30 +115,52 @@ def build_tree(
     order : int
         Terms of the series, a multiple of `BLOCK`.
     """
-    parts = [_build_part(x, y, mass, sheet, part, order) for part in _cut(region, sheet)]
-    if len(parts) == 1:
-        return parts[0]
-    starts, nodes, roots = [np.zeros(1, dtype=np.int64)], [], []
-    offset = leaf_offset = node_offset = 0
-    for part in parts:
-        starts.append(part.near_start[1:] + offset)
-        nodes.append(np.where(part.children >= 0, part.children + node_offset, part.children - leaf_offset))
-        roots.append(node_offset)
-        offset += int(part.near_start[-1])
-        leaf_offset += len(part)
-        node_offset += len(part.children)
-    return Tree(
-        centre=np.concatenate([part.centre for part in parts]),
-        half=np.concatenate([part.half for part in parts]),
-        real=np.concatenate([part.real for part in parts]),
-        imag=np.concatenate([part.imag for part in parts]),
-        inside=np.concatenate([part.inside for part in parts]),
-        near_start=np.concatenate(starts),
-        near=np.concatenate([part.near for part in parts]),
-        roots=np.concatenate([part.roots for part in parts]),
-        root_node=np.array(roots, dtype=np.int64),
-        children=np.concatenate(nodes),
-    )
+    rank = _along_curve(x, y)
+    stars = (x[rank], y[rank], mass[rank])
+    parts = _cut(region, sheet)
+    while len(parts) < _MOST_PARTS and len(x) > _SINGLE_PART * len(parts):
+        parts = [half for part in parts for half in _halves(part)]
+    a, b, kappa = (1.0, 1.0, 0.0) if sheet is None else sheet
+    smallest = np.array([_LARGEST_POWER ** (-1.0 / order), _CORNER_SIZE * np.hypot(a, b)])
+    roots = np.array([part[:4] for part in parts])
+    boxes = [
+        np.array([0.5 * (r[0] + r[1]), 0.5 * (r[2] + r[3]), 0.5 * (r[1] - r[0]), 0.5 * (r[3] - r[2])]) for r in roots
+    ]
+    with ThreadPoolExecutor(os.cpu_count()) as pool:
+        shapes = list(pool.map(lambda box: _shape(stars[0], stars[1], box, (a, b, kappa > 0.0), smallest), boxes))
+        nodes = np.concatenate([[0], np.cumsum([len(shape[0]) for shape in shapes])]).astype(np.int64)
+        leaves = np.concatenate([[0], np.cumsum([len(shape[1]) for shape in shapes])]).astype(np.int64)
+        start = np.concatenate([[0], np.cumsum(np.concatenate([shape[1] for shape in shapes]))]).astype(np.int64)
+        n = int(leaves[-1])
+        tree = Tree(
+            centre=np.empty((n, 2)),
+            half=np.empty((n, 2)),
+            real=np.empty((n, order)),
+            imag=np.empty((n, order)),
+            inside=np.repeat([part[4] and kappa > 0.0 for part in parts], np.diff(leaves)),
+            near_start=start,
+            near=np.empty(start[-1], dtype=np.int64),
+            roots=roots,
+            root_node=nodes[:-1].copy(),
+            children=np.concatenate(
+                [
+                    np.where(shape[0] >= 0, shape[0] + node, shape[0] - leaf)
+                    for shape, node, leaf in zip(shapes, nodes[:-1], leaves[:-1], strict=True)
+                ]
+            ),
+        )
+        binomials = _binomials(order)
+
+        def fill(number: int) -> None:
+            own = slice(leaves[number], leaves[number + 1])
+            arrays = (tree.centre[own], tree.half[own], tree.real[own], tree.imag[own])
+            near = (start[leaves[number] : leaves[number + 1] + 1], tree.near)
+            _fill(*stars, boxes[number], shapes[number][0], binomials, rank, *arrays, *near)
+            if kappa > 0.0:
+                _add_sheet(tree.centre[own], a, b, kappa, parts[number][4], tree.real[own], tree.imag[own])
+
+        list(pool.map(fill, range(len(parts))))
+    return tree
 
 
 def _cut(
@@ -152,164 +183,239 @@ def _between(low: float, high: float, edge: float) -> list[float]:
     return [low, *(cut for cut in (-edge, edge) if low < cut < high), high]
 
 
-def _build_part(
-    x: NDArray[np.float64],
-    y: NDArray[np.float64],
-    mass: NDArray[np.float64],
-    sheet: tuple[float, float, float] | None,
-    part: tuple[float, float, float, float, bool],
-    order: int,
-) -> Tree:
+_Part = tuple[float, float, float, float, bool]
+
+
+def _halves(part: _Part) -> tuple[_Part, _Part]:
+    """A part cut across its longer side, as boxes are."""
     x0, x1, y0, y1, inside = part
-    a, b, kappa = (1.0, 1.0, 0.0) if sheet is None else sheet
-    level: _Level = (
-        np.array([[0.5 * (x0 + x1), 0.5 * (y0 + y1)]]),
-        np.array([[0.5 * (x1 - x0), 0.5 * (y1 - y0)]]),
-        np.zeros((1, order)),
-        np.zeros((1, order)),
-        np.array([0, len(x)], dtype=np.int64),
-        np.arange(len(x), dtype=np.int64),
-    )
-    level = _settle(x, y, mass, *level)
-    leaves, nodes, leaf_count, node_count = [], [], 0, 1
-    for depth in range(_DEPTH + 1):
-        split = _to_split(level, a, b, kappa > 0.0) if depth < _DEPTH else np.zeros(len(level[0]), np.bool_)
-        leaves.append(_select(level, ~split))
-        children = np.empty((len(split), 2), dtype=np.int64)
-        children[~split] = -1 - (leaf_count + np.arange((~split).sum()))[:, None]
-        children[split] = node_count + np.arange(2 * split.sum()).reshape(-1, 2)
-        nodes.append(children)
-        leaf_count, node_count = leaf_count + int((~split).sum()), node_count + 2 * int(split.sum())
-        if not split.any():
-            break
-        level = _halve(x, y, mass, *_select(level, split))
-    joined = _join(leaves)
-    if kappa > 0.0:
-        _add_sheet(joined[0], a, b, kappa, inside, joined[2], joined[3])
-    return Tree(
-        centre=joined[0],
-        half=joined[1],
-        real=joined[2],
-        imag=joined[3],
-        inside=np.full(len(joined[0]), inside and kappa > 0.0),
-        near_start=joined[4],
-        near=joined[5],
-        roots=np.array([part[:4]]),
-        root_node=np.zeros(1, dtype=np.int64),
-        children=np.concatenate(nodes),
-    )
+    if x1 - x0 >= y1 - y0:
+        return (x0, 0.5 * (x0 + x1), y0, y1, inside), (0.5 * (x0 + x1), x1, y0, y1, inside)
+    return (x0, x1, y0, 0.5 * (y0 + y1), inside), (x0, x1, 0.5 * (y0 + y1), y1, inside)
 
 
-_Level = tuple[
-    NDArray[np.float64],
-    NDArray[np.float64],
-    NDArray[np.float64],
-    NDArray[np.float64],
-    NDArray[np.int64],
-    NDArray[np.int64],
-]
-"""Cells of one generation: centre, half, real, imag, near_start, near."""
+def _along_curve(x: NDArray[np.float64], y: NDArray[np.float64]) -> NDArray[np.int64]:
+    """Indices that sort stars along a curve that keeps neighbours together: memory is then read in order."""
+    key = np.zeros(len(x), dtype=np.int64)
+    for shift, values in enumerate((x, y)):
+        width = np.ptp(values) if len(x) else 0.0
+        cell = ((values - values.min()) * (_CURVE - 1) / width).astype(np.int64) if width > 0.0 else key * 0
+        for bit in range(10):
+            key |= ((cell >> bit) & 1) << (2 * bit + shift)
+    return np.argsort(key, kind="stable")
 
 
-def _join(leaves: list[_Level]) -> _Level:
-    counts = np.concatenate([np.diff(level[4]) for level in leaves])
-    start = np.concatenate([[0], np.cumsum(counts)]).astype(np.int64)
-    return (
-        np.concatenate([level[0] for level in leaves]),
-        np.concatenate([level[1] for level in leaves]),
-        np.concatenate([level[2] for level in leaves]),
-        np.concatenate([level[3] for level in leaves]),
-        start,
-        np.concatenate([level[5] for level in leaves]),
-    )
-
-
-def _select(level: _Level, mask: NDArray[np.bool_]) -> _Level:
-    centre, half, real, imag, start, near = level
-    counts = np.diff(start)
-    keep = np.repeat(mask, counts)
-    new_start = np.concatenate([[0], np.cumsum(counts[mask])]).astype(np.int64)
-    return centre[mask], half[mask], real[mask], imag[mask], new_start, near[keep]
-
-
-def _to_split(level: _Level, a: float, b: float, has_sheet: bool) -> NDArray[np.bool_]:
-    centre, half, start = level[0], level[1], level[4]
-    radius = np.hypot(half[:, 0], half[:, 1])
-    split: NDArray[np.bool_] = np.diff(start) > _MOST_NEAR
-    order = level[2].shape[1]
-    if has_sheet:
-        # The sheet's series converges up to the nearest corner: cells shrink towards it.
-        corner = np.hypot(np.abs(centre[:, 0]) - a, np.abs(centre[:, 1]) - b)
-        split |= (corner < RATIO * radius) & (radius > _CORNER_SIZE * np.hypot(a, b))
-    return split & (radius > _LARGEST_POWER ** (-1.0 / order))
+def _binomials(order: int) -> NDArray[np.float64]:
+    """Binomial coefficients n over k, [n, k]."""
+    table = np.zeros((order, order))
+    table[:, 0] = 1.0
+    for n in range(1, order):
+        table[n, 1:] = table[n - 1, 1:] + table[n - 1, :-1]
+    return table
 
 
 @kernel
-def _settle(x, y, mass, centre, half, real, imag, start, near):
-    """Move stars of the near lists that are far into the series."""
-    n, order = real.shape
-    kept = np.empty_like(near)
-    new_start = np.zeros(n + 1, dtype=np.int64)
-    total = 0
-    for cell in range(n):
-        cx, cy = centre[cell, 0], centre[cell, 1]
-        far2 = RATIO * RATIO * (half[cell, 0] ** 2 + half[cell, 1] ** 2)
-        for slot in range(start[cell], start[cell + 1]):
-            star = near[slot]
-            dx, dy = x[star] - cx, y[star] - cy
-            square = dx * dx + dy * dy
-            if square < far2:
-                kept[total] = star
-                total += 1
+def _enlarged(array, size):
+    larger = np.empty((size, *array.shape[1:]), dtype=array.dtype)
+    larger[: len(array)] = array
+    return larger
+
+
+@kernel
+def _keep_near(x, y, box, lists, first, last):
+    """Append to `lists` from `last` on those of its stars first:last that are near a box; return the new end."""
+    cx, cy = box[0], box[1]
+    far2 = RATIO * RATIO * (box[2] ** 2 + box[3] ** 2)
+    end = last
+    for slot in range(first, last):
+        star = lists[slot]
+        dx, dy = x[star] - cx, y[star] - cy
+        lists[end] = star
+        end += dx * dx + dy * dy < far2
+    return end
+
+
+@kernel
+def _child_box(box, side, out):
+    """The lower or the upper half of a box, across its longer side; returns the axis."""
+    out[:] = box
+    axis = 0 if box[2] >= box[3] else 1
+    out[2 + axis] *= 0.5
+    out[axis] += (2.0 * side - 1.0) * out[2 + axis]
+    return axis
+
+
+@kernel
+def _shape(x, y, root, corner, smallest):
+    """Cut a box until no leaf has many near stars: `children` (see `Tree`) and the numbers of near stars."""
+    a, b, has_sheet = corner
+    boxes, node = np.empty((_DEPTH + 2, 4)), np.zeros(_DEPTH + 2, dtype=np.int64)
+    begin, side = np.zeros(_DEPTH + 3, dtype=np.int64), np.zeros(_DEPTH + 2, dtype=np.int64)
+    lists = np.empty(4 * len(x) + 64, dtype=np.int64)
+    children, counts = np.empty((1024, 2), dtype=np.int64), np.empty(1024, dtype=np.int64)
+    for star in range(len(x)):
+        lists[star] = star
+    boxes[0] = root
+    begin[1] = len(x)
+    begin[2] = _keep_near(x, y, root, lists, 0, len(x))
+    leaves, nodes, depth = 0, 1, 0
+    entering = True
+    while depth >= 0:
+        # The near stars of the box at `depth` are lists[begin[depth + 1] : begin[depth + 2]].
+        if entering:
+            hx, hy = boxes[depth, 2], boxes[depth, 3]
+            radius = np.hypot(hx, hy)
+            count = begin[depth + 2] - begin[depth + 1]
+            split = count > _MOST_NEAR
+            if has_sheet:
+                # The sheet's series converges up to the nearest corner: cells shrink towards it.
+                away = np.hypot(abs(boxes[depth, 0]) - a, abs(boxes[depth, 1]) - b)
+                split |= away < RATIO * radius and radius > smallest[1]
+            if not split or radius <= smallest[0] or depth == _DEPTH:
+                children[node[depth]] = -1 - leaves
+                if leaves == len(counts):
+                    counts = _enlarged(counts, 2 * leaves)
+                counts[leaves] = count
+                leaves += 1
+                depth -= 1
+                entering = False
                 continue
-            # m / (z - z_i) = -m sum_k (z - c)^k / (z_i - c)^(k+1)
-            ir, ii = dx / square, -dy / square
-            tr, ti = -mass[star] * ir, -mass[star] * ii
-            for k in range(order):
-                real[cell, k] += tr
-                imag[cell, k] += ti
-                tr, ti = tr * ir - ti * ii, tr * ii + ti * ir
-        new_start[cell + 1] = total
-    return centre, half, real, imag, new_start, kept[:total].copy()
+            if nodes + 2 > len(children):
+                children = _enlarged(children, 2 * len(children))
+            children[node[depth], 0], children[node[depth], 1] = nodes, nodes + 1
+            nodes += 2
+            side[depth] = 0
+        elif side[depth] == 2:
+            depth -= 1
+            continue
+        _child_box(boxes[depth], side[depth], boxes[depth + 1])
+        node[depth + 1] = children[node[depth], side[depth]]
+        first, last = begin[depth + 1], begin[depth + 2]
+        if 2 * last - first > len(lists):
+            lists = _enlarged(lists, 2 * len(lists) + last)
+        begin[depth + 3] = _keep_near(x, y, boxes[depth + 1], lists, first, last)
+        side[depth] += 1
+        depth += 1
+        entering = True
+    return children[:nodes].copy(), counts[:leaves].copy()
 
 
 @kernel
-def _halve(x, y, mass, centre, half, real, imag, start, near):
-    """Cut cells across their longer side: both halves get the shifted series and the near stars, then settle."""
-    n, order = real.shape
-    child_centre, child_half = np.empty((2 * n, 2)), np.empty((2 * n, 2))
-    child_real, child_imag = np.empty((2 * n, order)), np.empty((2 * n, order))
-    child_start = np.zeros(2 * n + 1, dtype=np.int64)
-    child_near = np.empty(2 * len(near), dtype=np.int64)
-    total = 0
-    for cell in range(n):
-        along_x = half[cell, 0] >= half[cell, 1]
-        for side in range(2):
-            child = 2 * cell + side
-            sign = 2.0 * side - 1.0
-            for axis in range(2):
-                child_half[child, axis] = half[cell, axis]
-                child_centre[child, axis] = centre[cell, axis]
-            axis = 0 if along_x else 1
-            child_half[child, axis] *= 0.5
-            shift = sign * child_half[child, axis]
-            child_centre[child, axis] += shift
-            for k in range(order):
-                child_real[child, k] = real[cell, k]
-                child_imag[child, k] = imag[cell, k]
-            for i in range(order - 1):
-                for k in range(order - 2, i - 1, -1):
-                    if along_x:
-                        child_real[child, k] += shift * child_real[child, k + 1]
-                        child_imag[child, k] += shift * child_imag[child, k + 1]
-                    else:
-                        child_real[child, k] -= shift * child_imag[child, k + 1]
-                        child_imag[child, k] += shift * child_real[child, k + 1]
-            for slot in range(start[cell], start[cell + 1]):
-                child_near[total] = near[slot]
-                total += 1
-            child_start[child + 1] = total
-    return _settle(x, y, mass, child_centre, child_half, child_real, child_imag, child_start, child_near)
+def _add_far(x, y, mass, box, lists, first, last, real, imag, lanes, sums):
+    """Add those of the stars first:last that are far from a box to its series, and append the others; the new end."""
+    cx, cy = box[0], box[1]
+    far2 = RATIO * RATIO * (box[2] ** 2 + box[3] ** 2)
+    end, held, groups = last, 0, 0
+    for slot in range(first, last):
+        star = lists[slot]
+        dx, dy = x[star] - cx, y[star] - cy
+        square = dx * dx + dy * dy
+        if square < far2:
+            lists[end] = star
+            end += 1
+            continue
+        # m / (z - z_i) = -m sum_k (z - c)^k / (z_i - c)^(k+1)
+        ir, ii = dx / square, -dy / square
+        lanes[held], lanes[_LANES + held] = ir, ii
+        lanes[2 * _LANES + held], lanes[3 * _LANES + held] = -mass[star] * ir, -mass[star] * ii
+        held += 1
+        if held == _LANES:
+            if groups == 0:
+                sums[:] = 0.0
+            _add_powers(lanes, sums)
+            held, groups = 0, groups + 1
+    for lane in range(held):
+        ir, ii = lanes[lane], lanes[_LANES + lane]
+        tr, ti = lanes[2 * _LANES + lane], lanes[3 * _LANES + lane]
+        for k in range(len(real)):
+            real[k] += tr
+            imag[k] += ti
+            tr, ti = tr * ir - ti * ii, tr * ii + ti * ir
+    if groups:
+        for k in range(len(real)):
+            for lane in range(_LANES):
+                real[k] += sums[k, lane]
+                imag[k] += sums[k, _LANES + lane]
+    return end
+
+
+@kernel
+def _add_powers(lanes, sums):
+    """Add the terms of some stars side by side, as vectors."""
+    for k in range(len(sums)):
+        part = sums[k]
+        for i in range(_LANES):
+            a, b, c, d = lanes[i], lanes[_LANES + i], lanes[2 * _LANES + i], lanes[3 * _LANES + i]
+            part[i] += c
+            part[_LANES + i] += d
+            lanes[2 * _LANES + i] = c * a - d * b
+            lanes[3 * _LANES + i] = c * b + d * a
+
+
+@kernel
+def _shift(real, imag, shift, axis, binomials, new_real, new_imag):
+    """Series about a centre moved by `shift` along x (axis 0) or y."""
+    order = len(real)
+    new_real[:] = 0.0
+    new_imag[:] = 0.0
+    power, a, b = 1.0, 1.0, 0.0
+    for n in range(order):
+        # Coefficients in units of the shift, which is multiplied by i along y.
+        p, q = power * (a * real[n] - b * imag[n]), power * (a * imag[n] + b * real[n])
+        for k in range(order):
+            new_real[k] += binomials[n, k] * p
+            new_imag[k] += binomials[n, k] * q
+        power *= shift
+        if axis == 1:
+            a, b = -b, a
+    power, a, b = 1.0, 1.0, 0.0
+    for k in range(order):
+        p, q = new_real[k] * power, new_imag[k] * power
+        new_real[k], new_imag[k] = a * p - b * q, a * q + b * p
+        power /= shift
+        if axis == 1:
+            a, b = b, -a
+
+
+@kernel
+def _fill(x, y, mass, root, children, binomials, rank, centre, half, leaf_real, leaf_imag, near_start, near):
+    """Walk through the boxes as `_shape` cut them, with their series, and write the leaves."""
+    order = len(binomials)
+    boxes, node = np.empty((_DEPTH + 2, 4)), np.zeros(_DEPTH + 2, dtype=np.int64)
+    begin, side = np.zeros(_DEPTH + 3, dtype=np.int64), np.zeros(_DEPTH + 2, dtype=np.int64)
+    real, imag = np.zeros((_DEPTH + 2, order)), np.zeros((_DEPTH + 2, order))
+    lanes, sums = np.empty(4 * _LANES), np.empty((order, 2 * _LANES))
+    lists = np.empty(4 * len(x) + 64, dtype=np.int64)
+    for star in range(len(x)):
+        lists[star] = star
+    boxes[0] = root
+    begin[1] = len(x)
+    begin[2] = _add_far(x, y, mass, root, lists, 0, len(x), real[0], imag[0], lanes, sums)
+    depth = 0
+    while depth >= 0:
+        here = children[node[depth]]
+        if here[0] < 0:
+            leaf = -1 - here[0]
+            centre[leaf], half[leaf] = boxes[depth, :2], boxes[depth, 2:]
+            leaf_real[leaf], leaf_imag[leaf] = real[depth], imag[depth]
+            for slot in range(begin[depth + 2] - begin[depth + 1]):
+                near[near_start[leaf] + slot] = rank[lists[begin[depth + 1] + slot]]
+        if here[0] < 0 or side[depth] == 2:
+            side[depth] = 0
+            depth -= 1
+            continue
+        axis = _child_box(boxes[depth], side[depth], boxes[depth + 1])
+        node[depth + 1] = here[side[depth]]
+        moved = boxes[depth + 1, axis] - boxes[depth, axis]
+        _shift(real[depth], imag[depth], moved, axis, binomials, real[depth + 1], imag[depth + 1])
+        first, last = begin[depth + 1], begin[depth + 2]
+        if 2 * last - first > len(lists):
+            lists = _enlarged(lists, 2 * len(lists) + last)
+        begin[depth + 3] = _add_far(
+            x, y, mass, boxes[depth + 1], lists, first, last, real[depth + 1], imag[depth + 1], lanes, sums
+        )  # fmt: skip
+        side[depth] += 1
+        depth += 1
 
 
 @kernel
