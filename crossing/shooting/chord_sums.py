@@ -11,7 +11,7 @@ import numpy as np
 from crossing.shooting.compiled import kernel
 from crossing.shooting.image_curves import quadrature
 
-__all__ = ["add_chord", "panel_rule", "sum_panel"]
+__all__ = ["add_chord", "backgrounds", "panel_rule", "sum_panel"]
 
 _STEP, _P, _AREA, _TURN = 0, 1, 5, 8
 
@@ -274,10 +274,38 @@ def _third(c):
 
 
 @kernel
+def _add_calm(nodes, start, stop, position, half, weight, radius, limit, restless, darkened, out, rounded_out):
+    """Add a box by its middle chord, where that stands for all of the disc; where it does not, mark the position.
+
+    The outermost chords must agree, too: a curve may be out of the box on some chords and in on others.
+    """
+    calm = np.flatnonzero(~restless)
+    if len(calm) == 0:
+        return
+    place, middle, unused = position[calm], len(half) // 2, np.zeros((2, 0))
+    density = np.zeros((3, 2, len(calm)))
+    chords = (0, middle, len(half) - 1)
+    for i in range(3):
+        single = np.array([0.5 / half[chords[i]], 0.0])
+        add_chord(nodes, start[chords[i]], stop[chords[i]], place, half[chords[i]], False, single, single, density[i], unused)
+    share = 2.0 * (weight[:, 0] * half).sum()
+    # The same for a disc of the density one whose light is weighted.
+    rounded_share = 0.5 * np.pi * (weight[:, 0] * half * half).sum() / radius
+    for j in range(len(calm)):
+        value = density[1, 0, j]
+        if abs(0.5 * (density[0, 0, j] + density[2, 0, j]) - value) > 4.0 * limit * value:
+            restless[calm[j]] = True
+            continue
+        out[0, calm[j]] += share * value
+        if darkened:
+            rounded_out[calm[j]] += rounded_share * value
+
+
+@kernel
 def sum_panel(
     nodes, starts, active, position, half, radius, limit, darkened, weight, defects, budget, out, rounded_out, worst
 ):  # fmt: skip
-    """Add a panel of chords, box by box, with the difference of its two rules as the error.
+    """Add a panel of chords, box by box, and the difference of its two rules.
 
     Parameters
     ----------
@@ -304,34 +332,25 @@ def sum_panel(
     budget : (m,) ndarray
         Error that is allowed at each position.
     out : (2, m) ndarray
-        Sum and its error, added to.
-    rounded_out : (2, m) or (2, 0) ndarray
-        The same, each chord's area weighted with ``sqrt(half^2 - distance^2) / radius``.
+        Sum, and the difference of the rules, which is of either sign: where a curve wanders out of one box into the
+        next, those of both cancel. Added to.
+    rounded_out : (m,) or (0,) ndarray
+        Sum of the chords' areas weighted with ``sqrt(half^2 - distance^2) / radius``. Added to.
     worst : (boxes,) ndarray
         Set to the largest error of each box, in budgets.
     """
-    size, middle = len(position), len(half) // 2
-    share = 2.0 * (weight[:, 0] * half).sum()
-    single = np.array([share / (2.0 * half[middle]), 0.0])
-    # A uniform disc of the density one, weighted.
-    rounded_share = 0.5 * np.pi * (weight[:, 0] * half * half).sum() / radius
+    size = len(position)
     for box in range(len(active)):
         if not active[box]:
             continue
         restless = np.zeros(size, dtype=np.bool_)
         for chord in range(len(half)):
             _mark_restless(nodes, starts[chord, box], starts[chord, box + 1], position, radius, limit, restless)
-        calm = np.flatnonzero(~restless)
-        if len(calm) > 0:
-            part = np.zeros((2, len(calm)))
-            add_chord(nodes, starts[middle, box], starts[middle, box + 1], position[calm], half[middle], False,
-                single, single, part, part)  # fmt: skip
-            out[0][calm] += part[0]
-            if darkened:
-                rounded_out[0][calm] += part[0] * (rounded_share / share)
+        _add_calm(nodes, starts[:, box], starts[:, box + 1], position, half, weight, radius, limit, restless, darkened,
+            out, rounded_out)  # fmt: skip
         todo = np.flatnonzero(restless)
+        worst[box] = 0.0
         if len(todo) == 0:
-            worst[box] = 0.0
             continue
         part, rounded, place = np.zeros((2, len(todo))), np.zeros((2, len(todo))), position[todo]
         for chord in range(len(half)):
@@ -343,10 +362,44 @@ def sum_panel(
             if slot < len(todo) and todo[slot] == index[i]:
                 part[0, slot] += defect[0, i]
                 part[1, slot] += defect[1, i]
-        error = np.abs(part[0] - part[1])
-        worst[box] = (error / budget[todo]).max()
+        worst[box] = (np.abs(part[0] - part[1]) / budget[todo]).max()
         out[0][todo] += part[0]
-        out[1][todo] += error
+        out[1][todo] += part[0] - part[1]
         if darkened:
-            rounded_out[0][todo] += rounded[0]
-            rounded_out[1][todo] += np.abs(rounded[0] - rounded[1])
+            rounded_out[todo] += rounded[0]
+
+
+@kernel
+def backgrounds(nodes, folds, out):
+    """Magnification of a point at each fold of its line, by all images but the pair that is made there.
+
+    Parameters
+    ----------
+    nodes : (n, COLUMNS) ndarray
+        Nodes of the line.
+    folds : (m,) ndarray
+        Rows of the folds.
+    out : (m,) ndarray
+        Filled.
+    """
+    p, area = np.empty(7), np.empty(7)
+    place = nodes[folds, _P]
+    order = np.argsort(place)
+    place = place[order]
+    out[:] = 0.0
+    for i in range(len(nodes) - 1):
+        if nodes[i, _STEP] == 0.0:
+            continue
+        one, two = nodes[i], nodes[i + 1]
+        first = np.searchsorted(place, min(one[_P], two[_P]))
+        last = np.searchsorted(place, max(one[_P], two[_P]))
+        if first == last:
+            continue
+        _polynomials(one, two, p, area)
+        for j in range(first, last):
+            row = folds[order[j]]
+            if i == row or i + 1 == row:
+                continue
+            t, slope = _share(p, place[j] - one[_P], 0.5)
+            if slope != 0.0:
+                out[order[j]] += abs(_slope(area, t) / slope)

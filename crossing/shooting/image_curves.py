@@ -35,6 +35,7 @@ _GOING = -3
 _STEP, _P, _AREA, _TURN = 0, 1, 5, 8
 _MOST_CORRECTIONS = 6
 _SMALLEST = 1e-12
+_AT_THE_SEAM = 1e-11
 _MOST_STEPS = 1_000_000
 _MOST_TRIES = 40
 
@@ -208,6 +209,14 @@ def _turning_share(one, two, step):
 
 
 @kernel
+def _set_fold(row, state):
+    """Make a node that of a fold, where the gradients of p and w are parallel: their ratio is the caustic's slope."""
+    row[_P + 1] = 0.0
+    row[_TURN] = 1.0
+    row[_TURN + 1] = (1j * state[6] / state[3]).real
+
+
+@kernel
 def _to_fold(z, leaf, h, scene, line, bends, row, length):
     """Point of the curve, near z, where p turns; fills the node."""
     count = 0
@@ -222,10 +231,7 @@ def _to_fold(z, leaf, h, scene, line, bends, row, length):
             return count, z, state, False
         step = -row[_P + 1] / row[_P + 2]
         if abs(step * z1) < 1e-9 * length:
-            # The gradients of p and w are parallel here, and their ratio is the slope dp/dw of the caustic.
-            row[_P + 1] = 0.0
-            row[_TURN] = 1.0
-            row[_TURN + 1] = (1j * state[6] / state[3]).real
+            _set_fold(row, state)
             return count, z, state, True
         limit = 0.5 * length / abs(z1)
         step = min(max(step, -limit), limit)
@@ -385,11 +391,16 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
             c1, c2, c3 = _derivatives(state_f[3], state_f[4], state_f[5], bends[0])
             before = _true_step(share * true, middle - z, a1, c1, a2, c2, a3, c3)
             after = _true_step((1.0 - share) * true, ahead - middle, c1, b1, c2, b2, c3, b3)
-            if not (good and 0.0 < before < true and 0.0 < after < true):
+            if good and 0.0 < before < true and 0.0 < after < true:
+                count, running = _keep(nodes, count, room, here, fold, before, limits, running)
+                count, running = _keep(nodes, count, room, fold, there, after, limits, running)
+            elif length > _AT_THE_SEAM * (1.0 + abs(z)):
                 step *= 0.5
                 continue
-            count, running = _keep(nodes, count, room, here, fold, before, limits, running)
-            count, running = _keep(nodes, count, room, fold, there, after, limits, running)
+            else:
+                # The fold is in the jump between two leaves.
+                _set_fold(there, state)
+                count, running = _keep(nodes, count, room, here, there, true, limits, running)
         else:
             count, running = _keep(nodes, count, room, here, there, true, limits, running)
         here[:] = there

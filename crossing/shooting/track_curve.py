@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
+from crossing.shooting.chord_sums import backgrounds
+
 if TYPE_CHECKING:
     from astropy.table import QTable
     from matplotlib.axes import Axes
@@ -33,6 +35,8 @@ class Crossings:
     """(n,) angle between the track and the caustic's normal, 0 to pi/2 [rad]."""
     entering: NDArray[np.bool_]
     """(n,) whether the pair is there after the crossing."""
+    background: Array
+    """(n,) magnification of a point at the fold by all other images that the track's line has."""
 
     def __len__(self) -> int:
         return len(self.place)
@@ -54,8 +58,10 @@ class Crossings:
         magnification ``A sqrt(2 / |p''|) / sqrt(|p - p0|)`` along the track, and the normal's share of the track's
         direction makes K of it.
         """
-        found = nodes[(nodes[:, _TURN] != 0.0) & (nodes[:, _P] >= 0.0) & (nodes[:, _P] <= length)]
-        found = found[np.argsort(found[:, _P], kind="stable")]
+        rows = np.flatnonzero((nodes[:, _TURN] != 0.0) & (nodes[:, _P] >= 0.0) & (nodes[:, _P] <= length))
+        rows = rows[np.argsort(nodes[rows, _P], kind="stable")]
+        found, background = nodes[rows], np.empty(len(rows))
+        backgrounds(nodes, rows, background)
         tangent = np.abs(found[:, _TURN + 1])
         cosine = 1.0 / np.hypot(1.0, tangent)
         return cls(
@@ -64,6 +70,7 @@ class Crossings:
             strength=found[:, _AREA] * np.sqrt(2.0 / np.abs(found[:, _P + 2])) * np.sqrt(cosine),
             angle=np.arctan(tangent),
             entering=found[:, _P + 2] > 0.0,
+            background=background,
         )
 
     def to_dict(self) -> dict[str, Any]:
@@ -74,6 +81,7 @@ class Crossings:
             "strength": self.strength.tolist(),
             "angle_rad": self.angle.tolist(),
             "entering": self.entering.tolist(),
+            "background": self.background.tolist(),
         }
 
     def to_table(self) -> QTable:
