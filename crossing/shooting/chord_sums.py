@@ -31,7 +31,7 @@ _GAUSS = (
     0.129484966168869693270611432679082,
 )  # fmt: skip
 
-# The area is taken as a polynomial of p where the speeds of p at both ends are in this ratio at least, and where that is
+# The area is taken as a polynomial of p where the speeds of p at both ends are in this ratio at least, and where it is
 # right to this share; for so few chords it is not worth the while.
 _EVEN = 0.3
 _DIRECT = 1e-7
@@ -236,8 +236,9 @@ def add_chord(nodes, start, stop, position, half, darkened, weight, rounded_weig
             begin = max(first, np.searchsorted(position, low + half))
             end = max(begin, np.searchsorted(position, high - half))
             _add_inside(along, one[_P], two[_P] - one[_P], position, half, weight, out, begin, end)
-        _add_ends(one, p, area, rising, position, half, darkened, weight, rounded_weight, out, rounded_out, first, begin)
-        _add_ends(one, p, area, rising, position, half, darkened, weight, rounded_weight, out, rounded_out, end, last)
+        for low_row, high_row in ((first, begin), (end, last)):
+            _add_ends(one, p, area, rising, position, half, darkened, weight, rounded_weight, out, rounded_out, low_row,
+                high_row)  # fmt: skip
 
 
 @kernel
@@ -262,7 +263,8 @@ def _mark_restless(nodes, start, stop, position, radius, limit, restless):
         if calm:
             length = two[_P] - one[_P]
             bend = 6.0 * max(abs(along[2]), abs(_third(along))) / abs(length) ** 3
-            calm = bend * radius * radius / 8.0 < limit * min(one[_AREA] / abs(one[_P + 1]), two[_AREA] / abs(two[_P + 1]))
+            density = min(one[_AREA] / abs(one[_P + 1]), two[_AREA] / abs(two[_P + 1]))
+            calm = bend * radius * radius / 8.0 < limit * density
         if not calm:
             restless[first:last] = True
 
@@ -287,7 +289,8 @@ def _add_calm(nodes, start, stop, position, half, weight, radius, limit, restles
     chords = (0, middle, len(half) - 1)
     for i in range(3):
         single = np.array([0.5 / half[chords[i]], 0.0])
-        add_chord(nodes, start[chords[i]], stop[chords[i]], place, half[chords[i]], False, single, single, density[i], unused)
+        k = chords[i]
+        add_chord(nodes, start[k], stop[k], place, half[k], False, single, single, density[i], unused)
     share = 2.0 * (weight[:, 0] * half).sum()
     # The same for a disc of the density one whose light is weighted.
     rounded_share = 0.5 * np.pi * (weight[:, 0] * half * half).sum() / radius
@@ -322,7 +325,7 @@ def sum_panel(
     radius : float
         Radius of the disc.
     limit : float
-        Where the density of a box's images bends by less than this share over the disc, the middle chord stands for all.
+        Where the density of a box's images bends by less than this share over the disc, the middle chord stands for it.
     darkened : bool
         Whether `rounded_out` is wanted.
     weight : (chords, 2) ndarray

@@ -1,8 +1,8 @@
 """What a rule of chords gets wrong next to a straight fold, from the closed form of a disc on one.
 
-Where the end of a chord meets a fold, its light has a square root's kink in the chord's place, and no rule of few points
-likes that. Across a small disc a fold is nearly straight and evenly strong; the error of the rule on that fold is known,
-and is taken off. What then remains goes with the bend of the fold over the disc.
+Where the end of a chord meets a fold, its light has a square root's kink in the chord's place, and no rule of few
+points likes that. Across a small disc a fold is nearly straight and evenly strong; the error of the rule on that fold
+is known, and is taken off. What then remains goes with the bend of the fold over the disc.
 """
 
 from __future__ import annotations

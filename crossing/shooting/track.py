@@ -30,6 +30,8 @@ Array = NDArray[np.float64]
 
 _DEEPEST = 40
 _MOST_PANELS = 4000
+# Boxes that a thread sums at a time.
+_SHARE = 64
 # Curves whose own error is this share of what is allowed are halved; if that is not enough, those of smaller shares.
 _FIRST_SHARE = 0.1
 _LAST_SHARE = 1e-3
@@ -39,7 +41,7 @@ _MOST_POSITIONS = 200_000
 _OFF_CENTRE = 1.37e-4
 _POINT = 1e-6
 # Kronrod's rule is better than its difference from Gauss's by at least this factor where the light has a kink.
-_RULES = 0.4
+_RULES = 1.0
 # One chord stands for the disc where the density bends by less than this share of the accuracy.
 _CALM = 0.1
 # Positions around a crossing, in radii along the normal.
@@ -184,16 +186,28 @@ class _Disc:
         return panel
 
     def _sum(self, panel: Panel, place: Array, budget: Array, darkened: bool) -> tuple[Array, Array, Array]:
-        """Light of a panel and the difference of its rules, (2, m); weighted light; largest error of each box in budgets."""
-        out, rounded = np.zeros((2, len(place))), np.zeros(len(place) if darkened else 0)
+        """Light of a panel and its rules' difference, (2, m); weighted light; each box's largest error in budgets."""
         worst = np.zeros(len(panel.boxes))
-        defects = fold_defects(
+        begin, index, defect = fold_defects(
             panel.folds, self.radius, panel.distance, panel.half, panel.weight, len(panel.boxes), place
         )
-        sum_panel(
-            panel.nodes, panel.starts, panel.active, place, panel.half, self.radius, _CALM * self.accuracy,
-            darkened, panel.weight, defects, budget, out, rounded, worst,
-        )  # fmt: skip
+
+        def part(boxes: slice) -> tuple[Array, Array]:
+            out, rounded = np.zeros((2, len(place))), np.zeros(len(place) if darkened else 0)
+            sum_panel(
+                panel.nodes, panel.starts[:, boxes.start : boxes.stop + 1], panel.active[boxes], place, panel.half,
+                self.radius, _CALM * self.accuracy, darkened, panel.weight,
+                (begin[boxes.start : boxes.stop + 1], index, defect), budget, out, rounded, worst[boxes],
+            )  # fmt: skip
+            return out, rounded
+
+        # Parts of a fixed size, summed in their order: the same for any number of threads.
+        count = len(panel.boxes)
+        parts = list(self.scene.share(part, [slice(i, min(i + _SHARE, count)) for i in range(0, count, _SHARE)]))
+        out, rounded = parts[0]
+        for more, darker in parts[1:]:
+            out += more
+            rounded += darker
         return out, rounded, worst
 
     def light(self, place: Array) -> tuple[Array, Array]:
@@ -249,12 +263,9 @@ def _adaptive(discs: Sequence[_Disc], crossings: Crossings, length: float, toler
     smallest = min(disc.radius for disc in discs)
     seeds = [np.linspace(0.0, length, 33)]
     for disc in discs:
-        width = disc.radius / np.maximum(np.cos(crossings.angle), 0.02)
-        seeds.append(
-            (
-                crossings.place[:, None] + np.where(crossings.entering, 1.0, -1.0)[:, None] * width[:, None] * _AROUND
-            ).ravel()
-        )
+        seen = crossings.strength / np.sqrt(disc.radius) > tolerance * crossings.background
+        side = np.where(crossings.entering, 1.0, -1.0) / np.maximum(np.cos(crossings.angle), 0.02)
+        seeds.append((crossings.place[seen, None] + disc.radius * side[seen, None] * _AROUND).ravel())
     place = _thinned(np.concatenate(seeds), length, 0.02 * smallest)
     values = np.stack([disc.light(place)[0] for disc in discs])
     todo = np.ones(len(place) - 1, dtype=np.bool_)

@@ -54,8 +54,8 @@ class Crossings:
 
         Notes
         -----
-        Where p turns, ``p = p0 + p'' t^2 / 2`` and the area grows by ``A = 1/|G|^2`` per t: both images together have the
-        magnification ``A sqrt(2 / |p''|) / sqrt(|p - p0|)`` along the track, and the normal's share of the track's
+        Where p turns, ``p = p0 + p'' t^2 / 2`` and the area grows by ``A = 1/|G|^2`` per t: both images together have
+        the magnification ``A sqrt(2 / |p''|) / sqrt(|p - p0|)`` along the track, and the normal's share of the track's
         direction makes K of it.
         """
         rows = np.flatnonzero((nodes[:, _TURN] != 0.0) & (nodes[:, _P] >= 0.0) & (nodes[:, _P] <= length))
@@ -180,7 +180,7 @@ class TrackCurve:
             )
         )
         return (
-            f"<p>{self.status}{''.join(': ' + flag for flag in self.flags)}; {len(self.crossings)} fold crossings of the "
-            f"centre, {self.evaluations:.3g} evaluations</p><table><tr><th>radius [&theta;<sub>E</sub>]</th><th>mean</th>"
-            f"<th>highest</th></tr>{rows}</table>"
+            f"<p>{self.status}{''.join(': ' + flag for flag in self.flags)}; {len(self.crossings)} fold crossings of "
+            f"the centre, {self.evaluations:.3g} evaluations</p><table><tr><th>radius [&theta;<sub>E</sub>]</th>"
+            f"<th>mean</th><th>highest</th></tr>{rows}</table>"
         )

@@ -1,12 +1,12 @@
-"""A track over a star field, made ready: region of rays, stars whose images count, and the chords of the source's disc."""
+"""A track over a star field, made ready: region of rays, boxes of stars, and the chords of the source's disc."""
 
 from __future__ import annotations
 
 import os
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field, replace
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 from numpy.typing import NDArray
@@ -20,6 +20,7 @@ from crossing.shooting.tree import build_tree, order_for
 __all__ = ["Chord", "Panel", "TrackScene", "prepare_track"]
 
 Array = NDArray[np.float64]
+T = TypeVar("T")
 
 # Share of the asked accuracy that may be lost beyond the region of rays.
 _LOST_SHARE = 0.25
@@ -130,10 +131,14 @@ class TrackScene:
 
     def chords(self, distances: Sequence[float] | Array, boxes: NDArray[np.int64]) -> list[Chord]:
         """Images of several lines, by threads."""
-        if self.threads == 1 or len(distances) == 1:
-            return [self.chord(float(h), boxes) for h in distances]
+        return self.share(lambda h: self.chord(float(h), boxes), list(distances))
+
+    def share(self, work: Callable[[Any], T], items: Sequence[Any]) -> list[T]:
+        """Results of independent pieces of work, by threads, in the order of the items."""
+        if self.threads == 1 or len(items) == 1:
+            return [work(item) for item in items]
         with ThreadPoolExecutor(self.threads) as pool:
-            return list(pool.map(lambda h: self.chord(float(h), boxes), distances))
+            return list(pool.map(work, items))
 
     def panel(self, radius: float, low: float, high: float, boxes: NDArray[np.int64]) -> tuple[Panel, int, int]:
         """Chords of a disc between two angles; with the evaluations and the faults."""
@@ -213,7 +218,7 @@ def prepare_track(
     order = order_for(min(1e-9, max(1e-13, 1e-2 * accuracy * smallest)))
     # Curves are followed a little past an edge before they are taken back to it.
     beyond = tuple((1.0 + _TREE_MARGIN) * edge + np.sign(edge) for edge in region)
-    tree = build_tree(stars.x, stars.y, stars.mass, sheet, beyond, order)  # type: ignore[arg-type]
+    tree = build_tree(stars.x, stars.y, stars.mass, sheet, beyond, order)
     scene = (stars.lens_numbers, tree.arrays, tree.roots, tree.root_node, tree.children, stars.stars)
     boxes, held, begin = _boxes(stars, region)
     reach = deflection_reach(stars.kappa_star * stars.heavy_mass, lost) if stars.sheet else np.inf
@@ -243,7 +248,7 @@ def _half_region(stars: StarField, first: Array, last: Array, radius: float, los
 def _boxes(
     stars: StarField, region: tuple[float, float, float, float]
 ) -> tuple[Array, NDArray[np.int64], NDArray[np.int64]]:
-    """Cut a region across its longer side into boxes of a few stars; boxes, stars by box, where each box's stars begin."""
+    """Cut a region across its longer side into boxes of a few stars: boxes, stars by box, where each box begins."""
     inside = np.flatnonzero((np.abs(stars.x) < region[1]) & (np.abs(stars.y) < region[3]))
     along_x = region[1] >= region[3]
     place = (stars.x if along_x else stars.y)[inside]
