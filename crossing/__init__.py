@@ -20,7 +20,11 @@ _HOME = {
     # star fields
     "MagnificationMap": "crossing.shooting.magnification_map",
     "StarField": "crossing.shooting.field",
+    "TrackCurve": "crossing.shooting.track_curve",
     "magnification_map": "crossing.shooting.mapping",
+    "trace_caustics": "crossing.shooting.caustics",
+    "track_crossings": "crossing.shooting.track",
+    "track_magnification": "crossing.shooting.track",
     # inference
     "FitPriors": "crossing.inference",
     "fit_crossing": "crossing.inference",
@@ -36,6 +40,7 @@ __all__ = [
     "LocalLens",
     "MagnificationMap",
     "StarField",
+    "TrackCurve",
     "effective_velocity",
     "einstein_radius",
     "fit_crossing",
@@ -43,6 +48,9 @@ __all__ = [
     "magnification_map",
     "read_event",
     "read_lightcurve",
+    "trace_caustics",
+    "track_crossings",
+    "track_magnification",
 ]
 
 
