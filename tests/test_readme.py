@@ -11,6 +11,7 @@ import pytest
 from crossing.cli import fit as verb
 from crossing.event import read_event
 from crossing.inference import FLAGS, fit_crossing
+from crossing.shooting.track_curve import TrackCurve
 
 ROOT = Path(__file__).parent.parent
 TEXT = (ROOT / "README.md").read_text(encoding="utf-8")
@@ -44,13 +45,24 @@ def test_the_event_and_its_light_curve_can_be_fitted(tmp_path: Path) -> None:
 
 
 def test_the_python_example_runs(monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]) -> None:
-    (code,) = blocks("python")
+    code, _ = blocks("python")
     monkeypatch.chdir(ROOT)
     names: dict[str, object] = {}
     exec(compile(code, "README.md", "exec"), names)
     assert capsys.readouterr().out.endswith("Rsun\n")
     # 150 + 3 / sqrt(2e-4) J(0.65), with the peak J(0.652230) = 1.393119 of a uniform disc (Schneider & Weiss 1986)
     assert float(names["peak"]) == pytest.approx(150 + 3 / 2e-4**0.5 * 1.393119, rel=1e-4)  # type: ignore[arg-type]
+
+
+def test_the_python_example_of_tracks_runs() -> None:
+    _, code = blocks("python")
+    names: dict[str, object] = {}
+    exec(compile("import crossing\n" + code, "README.md", "exec"), names)
+    curve = names["curve"]
+    assert isinstance(curve, TrackCurve)
+    assert not curve.flags
+    # The macro magnification is 833; tracks of one Einstein radius scatter, but not by factors of three.
+    assert 300 < curve.mean_magnification[0] < 2500
 
 
 def test_it_names_every_flag_and_every_file() -> None:

@@ -20,7 +20,10 @@ DONE, FAULT, INVALID, FLAGGED, INTERRUPTED = 0, 1, 2, 3, 130
 # Verb, module and one line of help; modules are imported when their verb is called.
 _VERBS = {
     "fit": ("crossing.cli.fit", "fit a caustic crossing to a light curve: radius, temperature, luminosity"),
+    "library": ("crossing.cli.library", "list, fill or remove the tracks that are kept on disk"),
     "map": ("crossing.cli.map", "map the magnification of a random star field over the source plane"),
+    "peak": ("crossing.cli.peak", "predict peak magnifications, their rates and durations"),
+    "track": ("crossing.cli.track", "simulate light curves of the event's star on random tracks"),
 }
 
 # Read by linear-algebra libraries when they are loaded, which no verb has done before it runs.
