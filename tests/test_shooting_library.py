@@ -16,6 +16,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from documents import differences
 
 from crossing.cli.main import main
 from crossing.errors import InputError
@@ -35,7 +36,7 @@ STARS = (Population(0.03, single(1.0)),)
 # Few stars and large discs: a tenth of a second a track.
 SMALL = TrackCell(kappa=0.45, gamma=0.2, populations=STARS, length=1.0, radii=(1e-3, 10**-2.5, 1e-2), accuracy=5e-3)
 # With folds on two of the first five tracks.
-FOLDED = replace(SMALL, kappa=0.6, gamma=0.3, populations=(Population(0.05, single(1.0)),))
+FOLDED = replace(SMALL, kappa=0.6, gamma=0.3, populations=(Population(0.05, single(1.0)),), accuracy=2e-3)
 # mu = 833: 1/|0.301^2 - 0.299^2| = 1/0.0012.
 HIGH = TrackCell(kappa=0.699, gamma=0.299, populations=(Population(0.01, single(1.0)),))
 CODE = """
@@ -109,43 +110,44 @@ def test_same_seeds_same_tracks_from_anywhere(folder: Path, fresh: tuple[Library
 
 
 def test_curves_against_direct_ones(folded: tuple[LibraryTrack, ...]) -> None:
-    """At the library's radii within twice its accuracy: curves, choice of places, thinning; between, within 5%."""
+    """At the library's radii within four times its accuracy: both curves, choice of places, thinning; between, 5%."""
     assert [len(track.crossings) for track in folded] == [2, 1]
     for track in folded:
         stars, start, end = FOLDED.place(track.index)
-        for radius, limit in ((1e-3, 2.0), (10**-2.5, 2.0), (10**-2.75, 10.0)):
-            direct = track_magnification(stars, start, end, radius, accuracy=1e-4)
+        for radius, limit in ((1e-3, 4.0), (10**-2.5, 4.0), (10**-2.75, 25.0)):
+            direct = track_magnification(stars, start, end, radius, accuracy=FOLDED.accuracy)
             served = track.at(radius, direct.position * track.length)
-            assert np.abs(served / direct.magnification - 1.0).max() < limit * SMALL.accuracy
+            assert np.abs(served / direct.magnification - 1.0).max() < limit * FOLDED.accuracy
             place, values = track.curve(radius)
             lines = np.interp(direct.position * track.length, place, values)
             # Straight lines of the curve add a little.
-            assert np.abs(lines / direct.magnification - 1.0).max() < (limit + 2.0) * SMALL.accuracy
+            assert np.abs(lines / direct.magnification - 1.0).max() < (limit + 4.0) * FOLDED.accuracy
             assert np.trapezoid(values, place) / track.length == pytest.approx(direct.mean_magnification[0], rel=5e-3)
 
 
 def test_darkened_discs(folded: tuple[LibraryTrack, ...]) -> None:
     track = folded[0]
     stars, start, end = FOLDED.place(0)
-    direct = track_magnification(stars, start, end, 10**-2.5, limb_darkening=0.6, accuracy=1e-4)
+    direct = track_magnification(stars, start, end, 10**-2.5, limb_darkening=0.6, accuracy=FOLDED.accuracy)
     served = track.at(10**-2.5, direct.position * track.length, 0.6)
-    assert np.abs(served / direct.magnification - 1.0).max() < BETWEEN_RADII_ERROR["most"]
+    assert np.abs(served / direct.magnification - 1.0).max() < 0.05
 
 
 @pytest.mark.slow
 def test_stated_error_between_radii() -> None:
-    """At mu = 833 and the middle of the library's last two radii, its worst place."""
-    radius, miss, weight = 10**-2.25, [], []
-    cell = replace(HIGH, radii=RADII[-3:])
+    """At mu = 833 on both sides, at the last of the stated radii, where it is largest."""
+    stated, miss = BETWEEN_RADII_ERROR[-1], []
+    radius = stated["radius"]
     for index in range(6):
+        side = {} if index % 2 == 0 else {"kappa": 0.701, "gamma": 0.301}
+        cell = replace(HIGH, radii=RADII[-2:], **side)
         track = compute_track(cell, index)
         stars, start, end = cell.place(index)
         direct = track_magnification(stars, start, end, radius, positions=np.linspace(0.0, 1.0, 4001), accuracy=1e-3)
         miss.append(track.at(radius, direct.position * track.length) / direct.magnification - 1.0)
-        weight.append(np.ones(4001))
     error = np.abs(np.concatenate(miss))
-    assert np.sqrt(np.mean(error**2)) < BETWEEN_RADII_ERROR["rms"]
-    assert np.quantile(error, 0.99) < BETWEEN_RADII_ERROR["most"]
+    assert np.sqrt(np.mean(error**2)) < stated["rms"]
+    assert np.quantile(error, 0.99) < stated["most"]
 
 
 def test_radius_out_of_range(fresh: tuple[LibraryTrack, ...]) -> None:
@@ -210,9 +212,9 @@ def test_key_changes_with_versions_and_with_nothing_else(monkeypatch: pytest.Mon
 
 
 def test_regression_of_the_numbers(folded: tuple[LibraryTrack, ...]) -> None:
-    """Regression only: if this fails beyond the accuracy, raise NUMERICAL_VERSION."""
+    """Direct values at accuracy 1e-5 (regression only). If tracks change beyond theirs, raise NUMERICAL_VERSION."""
     found = folded[0].at(1e-2, np.array([0.1, 0.35, 0.8]))
-    np.testing.assert_allclose(found, [32.85, 30.79, 84.09], rtol=2 * SMALL.accuracy)
+    np.testing.assert_allclose(found, [30.478, 29.121, 84.225], rtol=2 * FOLDED.accuracy)
 
 
 def test_cell_of_an_event() -> None:
@@ -255,7 +257,7 @@ def test_two_processes_at_once(folder: Path, fresh: tuple[LibraryTrack, ...]) ->
 
 
 def test_killed_in_the_middle(folder: Path, fresh: tuple[LibraryTrack, ...]) -> None:
-    running = process(100_000)
+    running = process(1000)
     deadline = time.monotonic() + 300.0
     while len(files(folder)) < 2 and time.monotonic() < deadline and running.poll() is None:
         time.sleep(0.01)
@@ -311,6 +313,28 @@ def test_damaged_file(folder: Path, fresh: tuple[LibraryTrack, ...], damage: Cal
     assert said[0].endswith("it is computed anew")
     assert_same(ensemble.tracks[1], fresh[1])
     assert load_tracks(SMALL, 2).notes == ()
+
+
+def test_damaged_description(folder: Path) -> None:
+    load_tracks(SMALL, 1)
+    (folder / SMALL.key / "cell.json").write_text("{")
+    (record,) = TrackLibrary().cells()
+    assert (record.words, record.current, record.tracks) == ("its description is damaged", False, 1)
+    load_tracks(SMALL, 2)
+    (record,) = TrackLibrary().cells()
+    assert (record.words, record.current, record.tracks) == (SMALL.words, True, 2)
+
+
+def test_cell_that_is_removed_while_it_is_filled(folder: Path) -> None:
+    def remove(done: int, count: int) -> None:
+        if done == 1:
+            TrackLibrary().remove(SMALL.key)
+
+    ensemble = load_tracks(SMALL, 4, progress=remove, threads=1)
+    assert (len(ensemble), ensemble.notes) == (4, ())
+    (record,) = TrackLibrary().cells()
+    assert record.words == SMALL.words
+    assert 1 <= record.tracks <= 3
 
 
 @pytest.mark.parametrize("number", [errno.ENOSPC, errno.EDQUOT])
@@ -431,6 +455,15 @@ def test_bad_commands(folder: Path, capsys: Captured, words: list[str], message:
     assert (told.err.count("\n"), told.out) == (1, "")
 
 
+def test_interrupted_filling(folder: Path, monkeypatch: pytest.MonkeyPatch, capsys: Captured) -> None:
+    def interrupt(*arguments: Any, **options: Any) -> None:
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("crossing.shooting.library.load_tracks", interrupt)
+    assert main(["library", "--fill", EVENT]) == 130
+    assert capsys.readouterr().err == "crossing library: interrupted; tracks that were complete are kept\n"
+
+
 def test_filling_by_command(
     folder: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: Captured, fresh: tuple[LibraryTrack, ...]
 ) -> None:
@@ -445,7 +478,10 @@ def test_filling_by_command(
     assert f"{SMALL.key}: 2 tracks, 2 of them new; mean magnification" in capsys.readouterr().out
     assert sorted(path.name for path in (tmp_path / "out").glob("[!.]*")) == ["library.json", "tracks.png"]
     assert main([*words, "--json"]) == 0
-    assert json.loads(capsys.readouterr().out)["filled"]["computed"] == 0
+    told = json.loads(capsys.readouterr().out)
+    assert told["filled"]["computed"] == 0
+    sample = json.loads((HERE / "contract" / "library.json").read_text(encoding="utf-8"))
+    assert differences(sample, told, optional=("removed",)) == []
     folder.rename(tmp_path / "moved")
     folder.write_text("in the way")
     assert main(words) == 2

@@ -174,3 +174,44 @@ def disc_characteristic(u: Array) -> Array:
         term = term * (u / 2) ** 2 / n**2
         out -= (-1.0) ** n * term / (n - 1)
     return out
+
+
+def star_images(u: float, v: float, field: StarField) -> Images:
+    """Images behind a few isolated stars in convergence and shear: the lens equation as a polynomial of (n + 1)^2.
+
+    With conj(z) = W/(k P), where P is the product of (z - z_i), the equation for z alone is multiplied with W - k P
+    conj(z_i) for every star (Witt 1990).
+    """
+    k, gamma, zeta = 1 - field.kappa, field.gamma, complex(u, v)
+    star = field.x + 1j * field.y
+    whole = np.poly1d(star, r=True)
+    others = [np.poly1d(np.delete(star, i), r=True) for i in range(len(star))]
+    w = np.poly1d([gamma, np.conj(zeta)]) * whole
+    for mass, other in zip(field.mass, others, strict=True):
+        w = w + mass * other
+    factors = [w - k * np.conj(one) * whole for one in star]
+    product = np.poly1d([1.0])
+    for factor in factors:
+        product = product * factor
+    total = (np.poly1d([k, -zeta]) * k * whole - gamma * w) * product
+    for i, mass in enumerate(field.mass):
+        rest = np.poly1d([mass])
+        for j, factor in enumerate(factors):
+            rest = rest * factor if j != i else rest
+        total = total - rest * k * whole * k * whole
+    z = total.roots
+
+    def terms(z: NDArray[np.complex128]) -> tuple[NDArray[np.complex128], NDArray[np.complex128]]:
+        inverse = 1 / (np.conj(z)[:, None] - np.conj(star))
+        return zeta - (k * z - gamma * np.conj(z) - inverse @ field.mass), -gamma + inverse**2 @ field.mass
+
+    for _ in range(20):
+        miss, other = terms(z)
+        step = (k * miss - other * np.conj(miss)) / (k**2 - np.abs(other) ** 2)
+        # A root that is no image must not be sent off to where another image is: steps are short.
+        z = z + step * np.minimum(1.0, 0.05 / np.maximum(np.abs(step), 1e-300))
+    miss, _ = terms(z)
+    z = z[np.abs(miss) < 1e-9]
+    near = np.abs(z[:, None] - z) < 1e-6 * (1e-3 + np.abs(z))
+    z = z[[not near[i, :i].any() for i in range(len(z))]]
+    return Images(z, 1 / (k**2 - np.abs(terms(z)[1]) ** 2))

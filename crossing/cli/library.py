@@ -17,6 +17,7 @@ if TYPE_CHECKING:
 
 __all__ = ["add_arguments", "run"]
 
+_INTERRUPTED = 130
 _MOST = 1_000_000
 
 
@@ -89,7 +90,11 @@ def run(options: argparse.Namespace) -> int:
     document: dict[str, Any] = {"verb": "library", "folder": None if library.folder is None else str(library.folder)}
     ensemble = None
     if options.fill is not None:
-        ensemble = _fill(options, library)
+        try:
+            ensemble = _fill(options, library)
+        except KeyboardInterrupt:
+            print("crossing library: interrupted; tracks that were complete are kept", file=sys.stderr)
+            return _INTERRUPTED
         document["filled"] = ensemble.to_dict()
     if options.remove is not None:
         document["removed"] = [record.to_dict() for record in _remove(options, library)]
@@ -175,7 +180,9 @@ def _text(document: dict[str, Any], records: list[CellRecord]) -> str:
             f"{record.key}  {record.tracks:>6}  {_size(record.bytes):>8}  {_age(told['age_days']):>8}  {record.words}"
             + old
         )
-    lines.append(f"{len(records)} cells, {_size(document['bytes'])} in {document['folder']}")
+    lines.append(
+        f"{len(records)} cell{'s' if len(records) > 1 else ''}, {_size(document['bytes'])} in {document['folder']}"
+    )
     return "\n".join(lines)
 
 

@@ -21,7 +21,7 @@ import numpy as np
 from crossing.shooting.compiled import kernel
 from crossing.shooting.tree import RATIO, _find
 
-__all__ = ["COLUMNS", "EXITED", "LOST", "follow", "leaf_at", "line_state", "outside", "quadrature"]
+__all__ = ["COLUMNS", "EXITED", "LOST", "clearance", "follow", "leaf_at", "line_state", "outside", "quadrature"]
 
 COLUMNS = 10
 """Numbers of a node: step to the next node; p and its three derivatives; three derivatives of the area; whether p turns
@@ -144,15 +144,15 @@ def _correct(z, leaf, h, scene, line, length):
 
     One leaf's series serves all evaluations: between leaves the map jumps by its error, and there would be no point.
     """
-    first = z
+    first, scale = z, abs(line[2]) + abs(line[3]) + abs(h) + abs(z)
     for count in range(1, _MOST_CORRECTIONS + 1):
         state = line_state(z.real, z.imag, leaf, scene, line)
         shift = 1j * (h - state[2]) / state[3]
         size = abs(shift)
         if not size < 2.0 * length:
             return count, z, state, 0.0, False
-        # What is left after a shift goes with its square.
-        if size < 1e-10 * length or size < 1e-15 * abs(z):
+        # What is left after a shift goes with its square; and where w is flat its rounding is all that is left.
+        if size < 1e-10 * length or size < 1e-15 * abs(z) or abs(h - state[2]) < 1e-15 * scale:
             return count, z, state, abs(z - first), True
         z += shift
     return _MOST_CORRECTIONS, z, state, abs(z - first), False
@@ -248,6 +248,27 @@ def outside(z, box):
 
 
 @kernel
+def _dips(low, high, here, speed_here, there, speed_there):
+    """Whether a coordinate that turns within a step, between its values and slopes at both ends, leaves an interval."""
+    if speed_here * speed_there >= 0.0:
+        return False
+    # The cubic's slope is zero at the share t, taken from the root that does not cancel.
+    c2, c3 = 3.0 * (there - here) - 2.0 * speed_here - speed_there, 2.0 * (here - there) + speed_here + speed_there
+    root = np.sqrt(max(c2 * c2 - 3.0 * c3 * speed_here, 0.0))
+    t = -speed_here / (c2 + (root if speed_here < 0.0 else -root))
+    furthest = here + t * (speed_here + t * (c2 + t * c3))
+    return furthest < low or furthest > high
+
+
+@kernel
+def _leaves_between(z, a1, ahead, b1, step, box):
+    """Whether a curve leaves a box and is back within a step: its other end would be met twice."""
+    return _dips(box[0], box[1], z.real, step * a1.real, ahead.real, step * b1.real) or _dips(
+        box[2], box[3], z.imag, step * a1.imag, ahead.imag, step * b1.imag
+    )
+
+
+@kernel
 def _ending(z, p, slope, scene, leaf, ends, p_low, box):
     """Star of the box at whose pole the curve has all but ended, or `_GOING`."""
     near_start, near = scene[1][5], scene[1][6]
@@ -266,7 +287,7 @@ def _ending(z, p, slope, scene, leaf, ends, p_low, box):
 
 
 @kernel
-def _clearance(z, scene, leaf):
+def clearance(z, scene, leaf):
     """Distance within which there is no star."""
     centre, half, _, _, _, near_start, near = scene[1]
     star_x, star_y, _ = scene[5]
@@ -279,17 +300,25 @@ def _clearance(z, scene, leaf):
 
 
 @kernel
+def _furthest_edge(z, box):
+    """Edge of a box that a point is furthest beyond."""
+    return np.argmax(np.array([box[0] - z.real, z.real - box[1], box[2] - z.imag, z.imag - box[3]]))
+
+
+@kernel
 def _land(z, state, leaf, h, scene, line, bends, box, length):
     """Move a point of the curve beyond the edges of a box back along the curve onto the edge."""
-    x, y = z.real, z.imag
-    beyond = np.array([box[0] - x, x - box[1], box[2] - y, y - box[3]])
-    edge = np.argmax(beyond)
+    edge = _furthest_edge(z, box)
     count, moved = 0, 0.0
     for _ in range(12):
         z1, z2, _ = _derivatives(state[3], state[4], state[5], bends[0])
         gap, speed = (box[edge] - z.real, z1.real) if edge < 2 else (box[edge] - z.imag, z1.imag)
         if abs(gap) <= 1e-12 * (1.0 + abs(z)):
-            return count, z, state, moved, True
+            if not outside(z, box):
+                return count, z, state, moved, True
+            # It came over another edge before, next to a corner.
+            edge = _furthest_edge(z, box)
+            continue
         if abs(gap) > length * abs(speed) / abs(z1) * 4.0:
             break
         step = gap / speed
@@ -299,6 +328,13 @@ def _land(z, state, leaf, h, scene, line, bends, box, length):
         if not good:
             break
     return count, z, state, moved, False
+
+
+@kernel
+def _reach(z, scene, leaf, a1, a2, a3):
+    """Step at which the curve's series stops converging, about."""
+    reach = min(2.0 * abs(a1) / max(abs(a2), 1e-300), np.sqrt(6.0 * abs(a1) / max(abs(a3), 1e-300)))
+    return min(reach, 2.0 * clearance(z, scene, leaf) / abs(a1))
 
 
 @kernel
@@ -337,32 +373,35 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
         Rows taken; at `room` the rest was not kept.
     end : int
         Star where the curve ended, `EXITED` or `LOST`.
+    z : complex
+        Where that was.
     evaluations : int
         Evaluations of the lens map.
     """
     here, there, fold = np.zeros(COLUMNS), np.zeros(COLUMNS), np.zeros(COLUMNS)
     leaf = leaf_at(z, scene)
     if leaf < 0:
-        return count, LOST, 0
+        return count, LOST, z, 0
     total, z, state, _, good = _correct(z, leaf, h, scene, line, length)
     if not good:
-        return count, LOST, total
+        return count, LOST, z, total
+    if outside(z, box):  # of a star next to the edge
+        return count, EXITED, z, total
     a1, a2, a3 = _derivatives(state[3], state[4], state[5], bends[0])
     _node(here, state[1], a1, a2, a3, state[6], state[7], state[8], bends[1])
     g_here = state[3]
-    step, running, tries = np.inf, False, 0
+    step, reach, beside, running, tries = np.inf, 0.0, False, False, 0
     end = _ending(z, here[_P], here[_P + 1], scene, leaf, ends, limits[0], box)
     for _ in range(_MOST_STEPS):
         if end != _GOING:
             break
         if tries == 0:
             beside = here[_P] < limits[0] or here[_P] > limits[1]
-            reach = min(2.0 * abs(a1) / max(abs(a2), 1e-300), np.sqrt(6.0 * abs(a1) / max(abs(a3), 1e-300)))
-            reach = min(reach, 2.0 * _clearance(z, scene, leaf) / abs(a1))
+            reach = _reach(z, scene, leaf, a1, a2, a3)
             step = min((1.5 if beside else 1.0) * pace * reach, 2.0 * step)
         length = abs(a1) * step
         if tries > _MOST_TRIES or not length > _SMALLEST * (abs(z) + 1e-3):
-            return count, LOST, total
+            return count, LOST, z, total
         tries += 1
         ahead = z + step * (a1 + step * (0.5 * a2 + step / 6.0 * a3))
         leaf_ahead, used, good, leaving = leaf_at(ahead, scene), 0, False, False
@@ -378,10 +417,16 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
             step *= 0.5
             continue
         b1, b2, b3 = _derivatives(state[3], state[4], state[5], bends[0])
+        if length > _AT_THE_SEAM * (1.0 + abs(z)) and not leaving and _leaves_between(z, a1, ahead, b1, step, box):
+            step *= 0.5
+            continue
         true = _true_step(guess, ahead - z, a1, b1, a2, b2, a3, b3)
         _node(there, state[1], b1, b2, b3, state[6], state[7], state[8], bends[1])
-        if not abs(true - guess) < 0.2 * guess or _hidden_turns(here, there, true):
+        if not abs(true - guess) < 0.1 * pace * guess or _hidden_turns(here, there, true):
             step *= 0.5
+            continue
+        if beside and step > pace * reach and _touches(here, there, limits):
+            step = pace * reach
             continue
         if here[_P + 1] * there[_P + 1] < 0.0:
             share = _turning_share(here, there, true)
@@ -410,13 +455,19 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
         nodes[count] = here
         nodes[count, _STEP] = 0.0
         count += 1
-    return count, LOST if end == _GOING else end, total
+    return count, LOST if end == _GOING else end, z, total
+
+
+@kernel
+def _touches(one, two, limits):
+    """Whether p is in its range between two nodes."""
+    return min(one[_P], two[_P]) <= limits[1] and max(one[_P], two[_P]) >= limits[0]
 
 
 @kernel
 def _keep(nodes, count, room, one, two, step, limits, running):
     """Keep a node whose step ahead touches the range of p; close the run where it does not."""
-    touches = min(one[_P], two[_P]) <= limits[1] and max(one[_P], two[_P]) >= limits[0]
+    touches = _touches(one, two, limits)
     if (touches or running) and count < room:
         nodes[count] = one
         nodes[count, _STEP] = step if touches else 0.0

@@ -29,10 +29,15 @@ __all__ = ["BETWEEN_RADII_ERROR", "EnsembleStatistics", "TrackEnsemble", "TrackW
 
 Array = NDArray[np.float64]
 
-BETWEEN_RADII_ERROR: Final = {"rms": 0.01, "most": 0.05}
-"""Relative error of curves at radii between those of the library's own grid of two a decade, at its worst radius: rms
-over a track, and what 99% of its length stay below. Next to caustics that only the rim of the disc meets, and at cusps,
-it can be 0.2."""
+BETWEEN_RADII_ERROR: Final = (
+    {"radius": 10**-3.75, "rms": 0.005, "most": 0.002},
+    {"radius": 10**-3.25, "rms": 0.006, "most": 0.005},
+    {"radius": 10**-2.75, "rms": 0.01, "most": 0.025},
+    {"radius": 10**-2.25, "rms": 0.015, "most": 0.06},
+)
+"""Relative error of curves half way between the radii of a library of two a decade: rms over tracks, and what 99% of
+their length stay below, measured at a mean magnification of 833, both sides; smaller discs are better still. At cusps,
+and where only the rim of the disc meets a caustic, it can be 0.3. With four radii a decade it is half as large."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -248,7 +253,7 @@ class TrackEnsemble:
             "parameters": self.cell.parameters,
             "computed": self.computed,
             "statistics": self.statistics.to_dict(),
-            "between_radii_error": dict(BETWEEN_RADII_ERROR),
+            "between_radii_error": [dict(row) for row in BETWEEN_RADII_ERROR],
             "status": self.status,
             "flags": list(self.flags),
             "notes": list(self.notes),

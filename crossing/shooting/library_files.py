@@ -9,6 +9,7 @@ from __future__ import annotations
 import errno
 import json
 import os
+import re
 import secrets
 import shutil
 import time
@@ -27,6 +28,7 @@ __all__ = ["CellRecord", "TrackLibrary", "library_folder"]
 _VARIABLE: Final = "CROSSING_LIBRARY"
 _ABOUT: Final = "cell.json"
 _TEMPORARY: Final = ".crossing-"
+_KEY: Final = re.compile("[0-9a-f]{20}")
 _STALE_SECONDS: Final = 86400.0
 _FULL: Final = frozenset({errno.ENOSPC, errno.EDQUOT, errno.EFBIG})
 
@@ -115,7 +117,7 @@ class TrackLibrary:
         }
         try:
             place.mkdir(parents=True, exist_ok=True)
-            if not (place / _ABOUT).exists():
+            if _read_about(place) != about:
                 _write(place / _ABOUT, (json.dumps(about, indent=1) + "\n").encode())
             _sweep(place)
         except OSError as error:
@@ -165,12 +167,12 @@ class TrackLibrary:
         path = _path(self.folder, cell, track.index)
         try:
             new = not path.exists()
-            _write(path, track.to_bytes(cell))
-        except FileNotFoundError:
-            # Somebody removed the cell meanwhile.
-            self.prepare(cell)
-            self._memory[cell.key, track.index] = track
-            return True
+            try:
+                _write(path, track.to_bytes(cell))
+            except FileNotFoundError:
+                # Somebody removed the cell meanwhile.
+                self.prepare(cell)
+                _write(path, track.to_bytes(cell))
         except OSError as error:
             self._refused(error)
             self._memory[cell.key, track.index] = track
@@ -202,6 +204,8 @@ class TrackLibrary:
                 f"`key` must be that of one cell, got {key!r}, which fits {count}; `crossing library` lists them",
                 source=self.folder,
             )
+        for left in self.folder.glob(f"{_TEMPORARY}*"):
+            shutil.rmtree(left, ignore_errors=True)
         place = self.folder / chosen[0].key
         # Under another name first, so that no half of a cell can be met.
         aside = place.with_name(f"{_TEMPORARY}{secrets.token_hex(6)}-{place.name}")
@@ -256,19 +260,31 @@ def _sweep(place: Path) -> None:
                 path.unlink()
 
 
-def _record(place: Path) -> CellRecord | None:
-    """What lies in a folder; None if that is no cell."""
+def _read_about(place: Path) -> dict[str, Any]:
+    """What a cell says of itself; nothing if that is missing or damaged."""
     try:
         about = json.loads((place / _ABOUT).read_text(encoding="utf-8"))
-        words, versions = str(about["words"]), (about["format"], about["numerics"])
+    except (OSError, ValueError, RecursionError):
+        return {}
+    return about if isinstance(about, dict) else {}
+
+
+def _record(place: Path) -> CellRecord | None:
+    """What lies in a folder; None if that is no cell."""
+    if not _KEY.fullmatch(place.name):
+        return None
+    about = _read_about(place)
+    versions = (about.get("format"), about.get("numerics"))
+    try:
+        changed = place.stat().st_mtime
         sizes = [(path.name, path.stat()) for path in place.iterdir()]
-    except (OSError, ValueError, KeyError, TypeError):
+    except OSError:
         return None
     tracks = [stat for name, stat in sizes if name.startswith("track_")]
-    created = min(stat.st_mtime for _, stat in sizes)
+    created = min((stat.st_mtime for _, stat in sizes), default=changed)
     return CellRecord(
         key=place.name,
-        words=words,
+        words=str(about.get("words", "its description is damaged")),
         tracks=len(tracks),
         bytes=sum(stat.st_size for _, stat in sizes),
         created=created,

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from crossing.shooting.compiled import kernel
-from crossing.shooting.image_curves import COLUMNS, EXITED, follow, leaf_at, line_state, outside
+from crossing.shooting.image_curves import COLUMNS, EXITED, clearance, follow, leaf_at, line_state, outside
 from crossing.shooting.tree import _find
 
 __all__ = ["edge_roots", "star_backgrounds", "trace_boxes"]
@@ -15,6 +15,8 @@ _EDGE_SHARE = 0.2
 _EDGE_FLOOR = 1e-4
 _MOST_ROOTS = 4096
 _MOST_TRIES = 4
+# Curves leave a box where the edges say, to this share of the distance from the origin.
+_SAME_EXIT = 1e-3
 
 
 @kernel
@@ -82,7 +84,8 @@ def edge_roots(start, stop, h, scene, line, floor, found, inward):
     at, before_at, before, roots, used = 0.0, 0.0, np.nan, 0, 0
     while True:
         z = start + at * along
-        state = line_state(z.real, z.imag, leaf_at(z, scene), scene, line)
+        leaf = leaf_at(z, scene)
+        state = line_state(z.real, z.imag, leaf, scene, line)
         used += 1
         gap = state[2] - h
         if gap * before < 0.0:
@@ -95,6 +98,8 @@ def edge_roots(start, stop, h, scene, line, floor, found, inward):
             return roots, used
         before_at, before = at, gap
         reach = min(abs(gap) / abs(state[3]), 2.0 * abs(state[3]) / max(abs(state[4]), 1e-300))
+        # A star beside the edge makes a peak that is not seen from afar.
+        reach = min(reach, 2.0 * clearance(z, scene, leaf))
         at = min(length, at + max(_EDGE_SHARE * reach, floor))
 
 
@@ -126,21 +131,30 @@ def _edge_root(start, along, low, high, low_gap, h, scene, line):
 
 @kernel
 def _start(star, h, scene, line, ends, limits, box):
-    """First point of a star's curve, inside the box, and a length that it may be off."""
+    """First point of a star's curve, inside the box, a length that it may be off, and evaluations."""
     star_x, star_y, star_mass = scene[5]
     place = complex(star_x[star], star_y[star])
-    behind = ends[star, 0] - max(min(limits[1], ends[star, 0] + ends[star, 2]), ends[star, 0] + ends[star, 3])
+    furthest = min(limits[1], ends[star, 0] + ends[star, 2])
+    behind = ends[star, 0] - max(furthest, ends[star, 0] + ends[star, 3])
+    used, z = 0, place
     for _ in range(60):
         offset = complex(line[0], line[1]) * star_mass[star] / complex(behind, h - ends[star, 1])
-        if not outside(place + offset, box):
+        z = place + offset
+        if outside(z, box):
+            behind *= 2.0
+            continue
+        used += 1
+        # The pole alone says p but roughly, and nothing of the curve may be left out.
+        short = furthest - line_state(z.real, z.imag, leaf_at(z, scene), scene, line)[1]
+        if short <= 0.0:
             break
-        behind *= 2.0
-    return place + offset, 0.3 * abs(offset)
+        behind -= 1.2 * short + 1e-9 * abs(behind)
+    return z, 0.3 * abs(z - place), used
 
 
 @kernel
-def _box_entries(box, h, scene, line, floor, room, entries):
-    """Curves that come into a box: their number, that of those that go out, evaluations."""
+def _box_entries(box, h, scene, line, floor, room, entries, exits):
+    """Curves that come into a box and those that go out: their numbers, and evaluations."""
     corners = (complex(box[0], box[2]), complex(box[1], box[2]), complex(box[1], box[3]), complex(box[0], box[3]))
     found, inward = np.empty(room, dtype=np.complex128), np.empty(room, dtype=np.bool_)
     into, out, used = 0, 0, 0
@@ -151,7 +165,8 @@ def _box_entries(box, h, scene, line, floor, room, entries):
             if inward[i] and into < room:
                 entries[into] = found[i]
                 into += 1
-            elif not inward[i]:
+            elif not inward[i] and out < room:
+                exits[out] = found[i]
                 out += 1
         out += max(0, roots - room)
     return into, out, used
@@ -190,21 +205,22 @@ def trace_boxes(which, boxes, order, begin, h, scene, line, bends, ends, limits,
     visits = np.zeros(len(scene[5][0]), dtype=np.int64)
     for i in range(len(which)):
         box, stars = boxes[which[i]], order[begin[which[i]] : begin[which[i] + 1]]
-        entries = np.empty(_MOST_ROOTS, dtype=np.complex128)
+        entries, exits = np.empty(_MOST_ROOTS, dtype=np.complex128), np.empty(_MOST_ROOTS, dtype=np.complex128)
         finer, complete, first = 1.0, False, count
         for _ in range(_MOST_TRIES):
             count = first
-            into, out, used = _box_entries(box, h, scene, line, _EDGE_FLOOR * finer**3, _MOST_ROOTS, entries)
+            into, out, used = _box_entries(box, h, scene, line, _EDGE_FLOOR * finer**3, _MOST_ROOTS, entries, exits)
             total += used
-            gone, lost = 0, 0
+            gone, lost, met = 0, 0, np.zeros(min(out, _MOST_ROOTS), dtype=np.bool_)
             visits[stars] = 0
             for curve in range(len(stars) + into):
                 if curve < len(stars):
-                    z, length = _start(stars[curve], h, scene, line, ends, limits, box)
+                    z, length, used = _start(stars[curve], h, scene, line, ends, limits, box)
+                    total += used
                 else:
                     z, length = entries[curve - len(stars)], 1.0
                 while True:
-                    reached, end, used = follow(
+                    reached, end, z_end, used = follow(
                         z, length, h, scene, line, bends, ends, limits, box, pace * finer, nodes, count, room
                     )
                     total += used
@@ -218,9 +234,13 @@ def trace_boxes(which, boxes, order, begin, h, scene, line, bends, ends, limits,
                     visits[end] += 1
                 elif end == EXITED:
                     gone += 1
+                    if len(met):
+                        nearest = np.argmin(np.abs(exits[: len(met)] - z_end))
+                        if abs(exits[nearest] - z_end) < _SAME_EXIT * (1.0 + abs(z_end)):
+                            met[nearest] = True
                 else:
                     lost += 1
-            complete = lost == 0 and gone == out and (visits[stars] == 1).all()
+            complete = bool(lost == 0 and gone == out and met.all() and (visits[stars] == 1).all())
             if complete:
                 break
             finer *= 0.5

@@ -44,6 +44,8 @@ _POINT = 1e-6
 _RULES = 1.0
 # One chord stands for the disc where the density bends by less than this share of the accuracy.
 _CALM = 0.1
+# First positions are no farther apart than this [theta_E]: bumps of cusps that the centre misses are not much narrower.
+_EVEN = 0.004
 # Positions around a crossing, in radii along the normal.
 _AROUND = np.array([-1.5, -1.0, -0.9, -0.7, -0.4, 0.0, 0.3, 0.5, 0.65, 0.8, 1.0, 1.1, 1.3, 1.7, 2.5, 4.0, 8.0])
 
@@ -261,7 +263,7 @@ class _Disc:
 def _adaptive(discs: Sequence[_Disc], crossings: Crossings, length: float, tolerance: float) -> Array:
     """Places along the track at which straight lines follow the curves of all discs."""
     smallest = min(disc.radius for disc in discs)
-    seeds = [np.linspace(0.0, length, 33)]
+    seeds = [np.linspace(0.0, length, int(np.clip(length / _EVEN, 33, _MOST_POSITIONS // 10)))]
     for disc in discs:
         seen = crossings.strength / np.sqrt(disc.radius) > tolerance * crossings.background
         side = np.where(crossings.entering, 1.0, -1.0) / np.maximum(np.cos(crossings.angle), 0.02)

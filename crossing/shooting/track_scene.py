@@ -206,6 +206,7 @@ def prepare_track(
     threads : int or None
         Threads; all cores if None.
     """
+    stars = _merged(stars)
     first, last = np.array(start), np.array(end)
     length = float(np.hypot(*(last - first)))
     a, b = (last - first) / length
@@ -236,6 +237,20 @@ def prepare_track(
         pace=_PACE * min(1.0, (accuracy / 1e-3) ** 0.125),
         threads=threads or os.cpu_count() or 1,
     )
+
+
+def _merged(stars: StarField) -> StarField:
+    """The same field with stars that lie on each other made one: they have but one image curve."""
+    if len(np.unique(stars.x)) == len(stars):
+        return stars
+    places, number = np.unique(np.stack([stars.x, stars.y]), axis=1, return_inverse=True)
+    if places.shape[1] == len(stars):
+        return stars
+    mass = np.bincount(number.ravel(), weights=stars.mass)
+    return StarField(
+        places[0], places[1], mass, stars.kappa, stars.gamma, stars.half_width, stars.half_height, stars.gradient,
+        sheet=stars.sheet, accuracy=stars.accuracy, lost_flux=stars.lost_flux,
+    )  # fmt: skip
 
 
 def _half_region(stars: StarField, first: Array, last: Array, radius: float, lost: float) -> tuple[float, float]:
