@@ -24,7 +24,7 @@ from crossing.cli import map as verb
 from crossing.cli.main import main
 from crossing.errors import InputError
 from crossing.report.map import CAUTIONS
-from crossing.shooting.magnification_map import FLAGS, MagnificationMap
+from crossing.shooting.maps.magnification_map import FLAGS, MagnificationMap
 
 HERE = Path(__file__).parent
 EVENT = str(HERE.parent / "demo_lightcurves" / "well_sampled.toml")
@@ -88,7 +88,7 @@ def quick(monkeypatch: pytest.MonkeyPatch) -> dict[str, Any]:
             expected_mean=field.expected_mean,
         )
 
-    monkeypatch.setattr("crossing.shooting.mapping.magnification_map", at_once)
+    monkeypatch.setattr("crossing.shooting.maps.mapping.magnification_map", at_once)
     return given
 
 
@@ -335,7 +335,7 @@ def test_a_plan_is_printed_and_nothing_written(
 # Runs the verb with a checkpoint after every share, and says when the first one is there.
 SLOW = """
 import sys, threading, time
-import crossing.shooting.mapping as mapping
+import crossing.shooting.maps.mapping as mapping
 made = mapping.magnification_map
 def slowed(field, *, checkpoint, **asked):
     def watch():
@@ -402,7 +402,7 @@ def test_without_a_checkpoint_nothing_is_left(
     def stop(*_: object, **__: object) -> None:
         raise error
 
-    monkeypatch.setattr("crossing.shooting.mapping.magnification_map", stop)
+    monkeypatch.setattr("crossing.shooting.maps.mapping.magnification_map", stop)
     status = draw_map(tmp_path / "deep" / "out")
     assert status == (130 if error is KeyboardInterrupt else 2 if isinstance(error, InputError) else 1)
     assert capsys.readouterr().err.count("\n") == 1
@@ -417,7 +417,7 @@ def test_a_foreign_file_is_kept(name: str, folder: Path, capsys: Captured, monke
     def never(*_: object, **__: object) -> None:
         raise AssertionError("the refusal must come before the work")
 
-    monkeypatch.setattr("crossing.shooting.mapping.magnification_map", never)
+    monkeypatch.setattr("crossing.shooting.maps.mapping.magnification_map", never)
     folder.mkdir()
     (folder / name).write_text("notes of somebody")
     assert draw_map(folder) == 2

@@ -14,7 +14,7 @@ from astropy.table import QTable
 from documents import differences
 
 from crossing.cli.main import main
-from crossing.shooting.peak_result import CAUTIONS
+from crossing.shooting.peaks.peak_result import CAUTIONS
 
 HERE = Path(__file__).parent
 EVENT = str(HERE.parent / "demo_lightcurves" / "well_sampled.toml")

@@ -15,7 +15,7 @@ from crossing.optics.scales import LensScales
 from crossing.photometry.simulated import FLAGS, SimulatedEvent, SimulationOptions, check_depths, simulate_event
 from crossing.photometry.simulated_figure import draw_fluxes, draw_magnitudes
 from crossing.shooting.from_event import LocalSetup, local_setup
-from crossing.shooting.track import track_magnification
+from crossing.shooting.tracks.track import track_magnification
 from crossing.stars.photosphere import ab_magnitude, blackbody_flux_njy
 
 HEAD = '[event]\nname = "knot"\n[lens]\nredshift = 0.5\n[source]\nredshift = 1.5\n'

@@ -11,7 +11,7 @@ import pytest
 from crossing.cli import fit as verb
 from crossing.event import read_event
 from crossing.inference import FLAGS, fit_crossing
-from crossing.shooting.track_curve import TrackCurve
+from crossing.shooting.tracks.track_curve import TrackCurve
 
 ROOT = Path(__file__).parent.parent
 TEXT = (ROOT / "README.md").read_text(encoding="utf-8")

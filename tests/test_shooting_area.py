@@ -6,10 +6,10 @@ import numpy as np
 import pytest
 from twins import cover, lens, one_star_images
 
-from crossing.shooting.area import deposit_leaves
-from crossing.shooting.edges import add_edge, add_points, running_sum
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map
+from crossing.shooting.maps.area import deposit_leaves
+from crossing.shooting.maps.edges import add_edge, add_points, running_sum
+from crossing.shooting.maps.mapping import magnification_map
 from crossing.stars.mass_functions import kroupa
 
 NOTHING = np.empty(0)

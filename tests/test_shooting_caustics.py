@@ -11,10 +11,10 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from crossing.errors import InputError
-from crossing.shooting.caustics import FLAGS, CausticCurve, CausticNetwork, trace_caustics
+from crossing.shooting.caustics.folds import fold_quantities
+from crossing.shooting.caustics.network import FLAGS, CausticCurve, CausticNetwork, trace_caustics
 from crossing.shooting.field import StarField
-from crossing.shooting.folds import fold_quantities
-from crossing.shooting.mapping import magnification_map
+from crossing.shooting.maps.mapping import magnification_map
 
 
 def one_star(lam_t: float, lam_r: float) -> StarField:

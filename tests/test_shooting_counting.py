@@ -6,9 +6,9 @@ import numpy as np
 import pytest
 from twins import lens, source_positions
 
-from crossing.shooting.counting import count_leaves
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map
+from crossing.shooting.maps.counting import count_leaves
+from crossing.shooting.maps.mapping import magnification_map
 from crossing.stars.mass_functions import kroupa
 
 REGION = (-6.0, 7.0, -5.0, 4.0)

@@ -9,8 +9,8 @@ from hypothesis import strategies as st
 from scipy.optimize import brentq
 
 from crossing.errors import InputError
+from crossing.shooting.caustics.folds import fold_quantities
 from crossing.shooting.field import StarField
-from crossing.shooting.folds import fold_quantities
 
 # A single star with shear, as (lam_t, lam_r).
 MINIMA = ((0.005, 0.4), (0.1, 0.5))

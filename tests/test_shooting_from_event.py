@@ -12,7 +12,7 @@ from crossing.errors import InputError
 from crossing.event import read_event
 from crossing.optics.scales import LensScales
 from crossing.shooting.from_event import LocalSetup, local_setup
-from crossing.shooting.magnification_map import MagnificationMap
+from crossing.shooting.maps.magnification_map import MagnificationMap
 
 HEAD = '[event]\nname = "knot"\n'
 REDSHIFTS = "[lens]\nredshift = 0.5\n[source]\nredshift = 1.5\n"

@@ -21,13 +21,13 @@ from documents import differences
 from crossing.cli.main import main
 from crossing.errors import InputError
 from crossing.event import read_event
-from crossing.shooting import library_files
 from crossing.shooting.from_event import local_setup
-from crossing.shooting.library import BETWEEN_RADII_ERROR, TrackEnsemble, load_tracks
-from crossing.shooting.library_cell import RADII, TrackCell
-from crossing.shooting.library_files import TrackLibrary, library_folder
-from crossing.shooting.library_track import LibraryTrack, compute_track
-from crossing.shooting.track import track_magnification
+from crossing.shooting.library import library_files
+from crossing.shooting.library.ensemble import BETWEEN_RADII_ERROR, TrackEnsemble, load_tracks
+from crossing.shooting.library.library_cell import RADII, TrackCell
+from crossing.shooting.library.library_files import TrackLibrary, library_folder
+from crossing.shooting.library.library_track import LibraryTrack, compute_track
+from crossing.shooting.tracks.track import track_magnification
 from crossing.stars.mass_functions import Population, kroupa, single
 
 HERE = Path(__file__).parent
@@ -42,7 +42,7 @@ HIGH = TrackCell(kappa=0.699, gamma=0.299, populations=(Population(0.01, single(
 CODE = """
 import sys
 from test_shooting_library import SMALL
-from crossing.shooting.library import load_tracks
+from crossing.shooting.library.ensemble import load_tracks
 print(load_tracks(SMALL, int(sys.argv[1]), threads=1).computed)
 """
 
@@ -207,7 +207,7 @@ def test_key_changes_with_versions_and_with_nothing_else(monkeypatch: pytest.Mon
     assert again.key == key
     for name in ("FORMAT_VERSION", "NUMERICAL_VERSION"):
         with monkeypatch.context() as patch:
-            patch.setattr(f"crossing.shooting.library_cell.{name}", 99)
+            patch.setattr(f"crossing.shooting.library.library_cell.{name}", 99)
             assert again.key != key
 
 
@@ -459,7 +459,7 @@ def test_interrupted_filling(folder: Path, monkeypatch: pytest.MonkeyPatch, caps
     def interrupt(*arguments: Any, **options: Any) -> None:
         raise KeyboardInterrupt
 
-    monkeypatch.setattr("crossing.shooting.library.load_tracks", interrupt)
+    monkeypatch.setattr("crossing.shooting.library.ensemble.load_tracks", interrupt)
     assert main(["library", "--fill", EVENT]) == 130
     assert capsys.readouterr().err == "crossing library: interrupted; tracks that were complete are kept\n"
 
@@ -471,7 +471,7 @@ def test_filling_by_command(
     event.write_text('[event]\nname = "k"\n[macro]\nkappa = 0.45\ngamma = 0.2\n[[microlenses]]\nkappa_star = 0.1\n')
     # The library's nine radii take a while; three will do here.
     monkeypatch.setattr(
-        "crossing.shooting.library_cell.TrackCell.from_setup", lambda setup, **told: replace(SMALL, **told)
+        "crossing.shooting.library.library_cell.TrackCell.from_setup", lambda setup, **told: replace(SMALL, **told)
     )
     words = ["library", "--fill", str(event), "--tracks", "2", "--accuracy", "0.005", "--out", str(tmp_path / "out")]
     assert main(words) == 0

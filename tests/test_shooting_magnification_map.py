@@ -17,11 +17,11 @@ from numpy.typing import NDArray
 
 from crossing.errors import InputError
 from crossing.optics.fold import fold_profile
-from crossing.shooting.convolution import disc_weights
-from crossing.shooting.magnification_map import FLAGS, MagnificationMap
-from crossing.shooting.map_figure import nice_length
-from crossing.shooting.sampling import bilinear
-from crossing.shooting.statistics import block_error
+from crossing.shooting.maps.convolution import disc_weights
+from crossing.shooting.maps.magnification_map import FLAGS, MagnificationMap
+from crossing.shooting.maps.map_figure import nice_length
+from crossing.shooting.maps.sampling import bilinear
+from crossing.shooting.maps.statistics import block_error
 
 STRENGTH = 3.0
 FIELD = {"kappa": 0.7, "gamma": 0.25, "kappa_star": 0.05, "stars": 421, "seed": {"entropy": "7", "spawn_key": []}}
@@ -216,8 +216,8 @@ def test_errors_of_pixels_are_averaged(rng: np.random.Generator) -> None:
 def test_bands_of_rows_do_not_show(monkeypatch: pytest.MonkeyPatch, rng: np.random.Generator) -> None:
     point = make(rng.lognormal(3.0, 1.0, (97, 60)))
     whole = point.convolve(4.4 * point.pixel_size).values
-    monkeypatch.setattr("crossing.shooting.convolution._LEAST_BAND", 1)
-    monkeypatch.setattr("crossing.shooting.convolution._BAND", 1)
+    monkeypatch.setattr("crossing.shooting.maps.convolution._LEAST_BAND", 1)
+    monkeypatch.setattr("crossing.shooting.maps.convolution._BAND", 1)
     np.testing.assert_allclose(point.convolve(4.4 * point.pixel_size).values, whole, rtol=1e-10)
 
 
@@ -461,7 +461,7 @@ def test_an_interruption_leaves_the_old_file(tmp_path: Path, monkeypatch: pytest
     def interrupt(*_: object) -> None:
         raise KeyboardInterrupt
 
-    monkeypatch.setattr("crossing.shooting.map_files.os.fsync", interrupt)
+    monkeypatch.setattr("crossing.shooting.maps.map_files.os.fsync", interrupt)
     with pytest.raises(KeyboardInterrupt):
         make(np.zeros((3, 5))).write(path, overwrite=True)
     assert MagnificationMap.read(path).mean_magnification == 1.0

@@ -11,9 +11,9 @@ from twins import lens, one_star_images
 
 from crossing.errors import InputError
 from crossing.optics.point_lens import disc_on_axis, point_magnification
-from crossing.shooting import mapping
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map, plan_map
+from crossing.shooting.maps import mapping
+from crossing.shooting.maps.mapping import magnification_map, plan_map
 from crossing.stars.mass_functions import chabrier, kroupa, log_normal, power_law, salpeter, single
 
 

@@ -13,11 +13,11 @@ import pytest
 from crossing.errors import InputError
 from crossing.event import Event, read_event
 from crossing.optics.scales import LensScales
-from crossing.shooting.peak_crossings import CrossingSample, pool_runs, weighted_quantiles
-from crossing.shooting.peak_forecast import MAGNIFICATIONS, RADII_RSUN, forecast_peaks
-from crossing.shooting.peak_lens import macro_choices, typical_mass
-from crossing.shooting.peak_result import FLAGS, PeakForecast
-from crossing.shooting.track_curve import Crossings
+from crossing.shooting.peaks.peak_crossings import CrossingSample, pool_runs, weighted_quantiles
+from crossing.shooting.peaks.peak_forecast import MAGNIFICATIONS, RADII_RSUN, forecast_peaks
+from crossing.shooting.peaks.peak_lens import macro_choices, typical_mass
+from crossing.shooting.peaks.peak_result import FLAGS, PeakForecast
+from crossing.shooting.tracks.track_curve import Crossings
 from crossing.stars.mass_functions import Population, kroupa, single
 
 Writer = Callable[..., Event]
@@ -66,8 +66,8 @@ def fields(monkeypatch: pytest.MonkeyPatch) -> dict[str, Any]:
         found: Crossings = given["found"]
         return replace(found, place=found.position * length)
 
-    monkeypatch.setattr("crossing.shooting.track.track_crossings", at_once)
-    monkeypatch.setattr("crossing.shooting.peak_forecast.light_curve_examples", lambda *_: ())
+    monkeypatch.setattr("crossing.shooting.tracks.track.track_crossings", at_once)
+    monkeypatch.setattr("crossing.shooting.peaks.peak_forecast.light_curve_examples", lambda *_: ())
     return given
 
 
@@ -241,7 +241,7 @@ def test_the_error_is_that_of_the_scatter_of_tracks(event: Writer, fields: dict[
     rng = np.random.default_rng(5)
     choices = macro_choices(event(HALF, SADDLE, STARS.format(0.005, 1)))
     draws = choices[0].draws(1, 0)
-    from crossing.shooting.peak_crossings import TrackRun
+    from crossing.shooting.peaks.peak_crossings import TrackRun
 
     def once() -> CrossingSample:
         runs = [
@@ -285,7 +285,7 @@ def test_crossings_per_einstein_radius(
     lam_t: float, angle: float, expected: float, error: float, event: Writer, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """Against another Monte Carlo, of det = 0 over the image plane: 600 stars of one mass, 2.4e5 fields."""
-    monkeypatch.setattr("crossing.shooting.peak_forecast.light_curve_examples", lambda *_: ())
+    monkeypatch.setattr("crossing.shooting.peaks.peak_forecast.light_curve_examples", lambda *_: ())
     motion = FAST.replace('"0 deg"', f'"{angle} deg"')
     macro = f"[macro]\nmu_t = {1 / lam_t}\nmu_r = 2.5\n"
     found = forecast_peaks(event(HALF, macro, STARS.format(0.01, 1), motion), radii=[10], magnifications=[1])
@@ -305,7 +305,7 @@ def test_the_published_network(event: Writer, monkeypatch: pytest.MonkeyPatch) -
     The last two are for 10 Rsun. Their 20 pc in 2e4 yr are 978 km/s; redshifts, mass and mu_r are those of the similar
     example of Oguri et al. (2018), so that only the order of magnitude can agree.
     """
-    monkeypatch.setattr("crossing.shooting.peak_forecast.light_curve_examples", lambda *_: ())
+    monkeypatch.setattr("crossing.shooting.peaks.peak_forecast.light_curve_examples", lambda *_: ())
     rates = []
     for side in (1, -1):  # both images, half way through the band
         macro = f"[macro]\nmu_t = {200 * side}\nmu_r = 3\n"
@@ -326,7 +326,7 @@ def test_the_published_network(event: Writer, monkeypatch: pytest.MonkeyPatch) -
 
 def test_strengths_have_the_sum_of_the_exact_tail(event: Writer, monkeypatch: pytest.MonkeyPatch) -> None:
     """The integral of K^2 over the length of caustics is the amplitude of the tail (Schneider 1987), for any masses."""
-    monkeypatch.setattr("crossing.shooting.peak_forecast.light_curve_examples", lambda *_: ())
+    monkeypatch.setattr("crossing.shooting.peaks.peak_forecast.light_curve_examples", lambda *_: ())
     macro = "[macro]\nmu_t = 200\nmu_r = 2.5\n"
     sample = forecast_peaks(event(HALF, macro, "[[microlenses]]\nkappa_star = 0.01\n"), radii=[10]).sample
     assert sample is not None
@@ -362,7 +362,7 @@ def test_examples_are_folds_at_their_peak(event: Writer) -> None:
 @pytest.mark.slow
 def test_both_images_of_a_pair(event: Writer, monkeypatch: pytest.MonkeyPatch) -> None:
     """In one field, 58 theta_E inside the macro caustic, and each in fields of its own, 62 theta_E inside."""
-    monkeypatch.setattr("crossing.shooting.peak_forecast.light_curve_examples", lambda *_: ())
+    monkeypatch.setattr("crossing.shooting.peaks.peak_forecast.light_curve_examples", lambda *_: ())
     found = []
     for distance in (1.1e-4, 1.17e-4):
         place = f'caustic_distance = "{distance} arcsec"\ngradient = "0.1 / arcsec"'

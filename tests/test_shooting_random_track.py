@@ -12,8 +12,8 @@ from crossing.errors import InputError
 from crossing.event import read_event
 from crossing.optics.motion import caustic_stretch, mean_normal_component
 from crossing.shooting.from_event import LocalSetup, local_setup
-from crossing.shooting.random_track import TrackMotion, draw_motion, map_widths, place_track, surroundings
-from crossing.shooting.track import track_crossings, track_magnification
+from crossing.shooting.tracks.random_track import TrackMotion, draw_motion, map_widths, place_track, surroundings
+from crossing.shooting.tracks.track import track_crossings, track_magnification
 
 HEAD = '[event]\nname = "knot"\n'
 REDSHIFTS = "[lens]\nredshift = 0.5\n[source]\nredshift = 1.5\n"

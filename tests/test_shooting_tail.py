@@ -15,7 +15,7 @@ import pytest
 from twins import density_at_zero
 
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map
+from crossing.shooting.maps.mapping import magnification_map
 from crossing.shooting.tree import evaluate
 
 

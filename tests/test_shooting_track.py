@@ -12,11 +12,11 @@ from twins import one_star_images, star_images
 
 from crossing.errors import InputError
 from crossing.optics.fold import fold_profile
+from crossing.shooting.caustics.folds import fold_quantities
 from crossing.shooting.field import StarField
-from crossing.shooting.folds import fold_quantities
-from crossing.shooting.images import count_images, image_magnifications
-from crossing.shooting.track import track_crossings, track_magnification
-from crossing.shooting.track_curve import TrackCurve
+from crossing.shooting.tracks.images import count_images, image_magnifications
+from crossing.shooting.tracks.track import track_crossings, track_magnification
+from crossing.shooting.tracks.track_curve import TrackCurve
 
 LENSES = [(0.005, 0.4), (0.1, 0.5), (-0.005, 0.4), (-0.1, 0.5)]
 

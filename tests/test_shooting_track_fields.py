@@ -10,9 +10,9 @@ from twins import lens
 from crossing.optics.fold import fold_profile
 from crossing.optics.random_fields import mean_magnification, tail_amplitude
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map
-from crossing.shooting.track import track_crossings, track_magnification
-from crossing.shooting.track_curve import TrackCurve
+from crossing.shooting.maps.mapping import magnification_map
+from crossing.shooting.tracks.track import track_crossings, track_magnification
+from crossing.shooting.tracks.track_curve import TrackCurve
 
 # kappa, gamma of mu = 833 on both sides, lam_r = 0.6.
 SIDES = [(0.699, 0.299), (0.701, 0.301)]

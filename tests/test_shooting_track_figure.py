@@ -6,8 +6,8 @@ import numpy as np
 import pytest
 from matplotlib.figure import Figure
 
-from crossing.shooting.track_curve import Crossings, TrackCurve
-from crossing.shooting.track_figure import draw_path, draw_track
+from crossing.shooting.tracks.track_curve import Crossings, TrackCurve
+from crossing.shooting.tracks.track_figure import draw_path, draw_track
 
 
 def curve(radii: int = 1, images: int = 1) -> TrackCurve:

@@ -12,8 +12,8 @@ from crossing.cli.options import examples, json_text
 from crossing.errors import InputError
 
 if TYPE_CHECKING:
-    from crossing.shooting.library import TrackEnsemble
-    from crossing.shooting.library_files import CellRecord, TrackLibrary
+    from crossing.shooting.library.ensemble import TrackEnsemble
+    from crossing.shooting.library.library_files import CellRecord, TrackLibrary
 
 __all__ = ["add_arguments", "run"]
 
@@ -79,7 +79,7 @@ def run(options: argparse.Namespace) -> int:
     """Run the verb; returns the exit status."""
     _check(options)
     from crossing.outputs import OutputFolder
-    from crossing.shooting.library_files import TrackLibrary
+    from crossing.shooting.library.library_files import TrackLibrary
 
     names = ["library.json", *(["tracks.png"] if options.fill is not None else [])]
     folder = None
@@ -139,8 +139,8 @@ def _fill(options: argparse.Namespace, library: TrackLibrary) -> TrackEnsemble:
     """Compute what is missing of an event's cell."""
     from crossing.event import read_event
     from crossing.shooting.from_event import local_setup
-    from crossing.shooting.library import load_tracks
-    from crossing.shooting.library_cell import TrackCell
+    from crossing.shooting.library.ensemble import load_tracks
+    from crossing.shooting.library.library_cell import TrackCell
 
     setup = local_setup(read_event(options.fill), model=options.model, pair=options.pair)
     told = {name: getattr(options, name) for name in ("length", "accuracy", "seed")}

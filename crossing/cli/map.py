@@ -14,10 +14,10 @@ from crossing.cli.options import add_shared, examples, json_text, out_folder
 
 if TYPE_CHECKING:
     from crossing.outputs import OutputFolder
-    from crossing.shooting.caustics import CausticNetwork
+    from crossing.shooting.caustics.network import CausticNetwork
     from crossing.shooting.field import StarField
-    from crossing.shooting.magnification_map import MagnificationMap
-    from crossing.shooting.mapping import MapPlan
+    from crossing.shooting.maps.magnification_map import MagnificationMap
+    from crossing.shooting.maps.mapping import MapPlan
 
 __all__ = ["add_arguments", "run"]
 
@@ -102,7 +102,7 @@ def run(options: argparse.Namespace) -> int:
 
     from crossing.report.map import plan_text
     from crossing.shooting.from_event import local_setup
-    from crossing.shooting.mapping import magnification_map, plan_map
+    from crossing.shooting.maps.mapping import magnification_map, plan_map
 
     setup = local_setup(event, model=options.model, pair=options.pair)
     height = options.width if options.height is None else options.height
@@ -140,7 +140,7 @@ def _files(options: argparse.Namespace) -> tuple[str, ...]:
 
 
 def _traced(options: argparse.Namespace, field: StarField, chart: MagnificationMap) -> CausticNetwork | None:
-    from crossing.shooting.caustics import trace_caustics
+    from crossing.shooting.caustics.network import trace_caustics
 
     return trace_caustics(field, chart.center, chart.width, height=chart.height) if options.caustics else None
 
@@ -177,9 +177,9 @@ def _deliver(
     """Write the files and tell what is in them; returns the exit status."""
     from crossing.report.fit import table_bytes
     from crossing.report.map import CAUTIONS, map_figure, map_text
-    from crossing.shooting.caustics import FLAGS as CAUSTIC_FLAGS
-    from crossing.shooting.magnification_map import FLAGS
-    from crossing.shooting.map_files import write_hdus
+    from crossing.shooting.caustics.network import FLAGS as CAUSTIC_FLAGS
+    from crossing.shooting.maps.magnification_map import FLAGS
+    from crossing.shooting.maps.map_files import write_hdus
 
     found = chart.statistics()
     content = {

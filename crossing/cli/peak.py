@@ -85,7 +85,7 @@ def run(options: argparse.Namespace) -> int:
 
     from crossing.report.fit import table_bytes
     from crossing.report.peak import peak_figure, peak_text
-    from crossing.shooting.peak_forecast import MAGNIFICATIONS, forecast_peaks
+    from crossing.shooting.peaks.peak_forecast import MAGNIFICATIONS, forecast_peaks
 
     result = forecast_peaks(
         event,

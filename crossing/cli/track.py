@@ -227,7 +227,7 @@ def _write_one(options: argparse.Namespace, files: OutputFiles, setup: LocalSetu
     from crossing.event.rewriting import rewritten_event
     from crossing.report.fit import table_bytes
     from crossing.report.track import track_figure
-    from crossing.shooting.random_track import map_widths, surroundings
+    from crossing.shooting.tracks.random_track import map_widths, surroundings
 
     event, light_curve, curve, *figure = _own_names(options, found.number)
     files.write_bytes(event, rewritten_event(

@@ -14,9 +14,9 @@ from crossing.optics.fold import profile_peak
 from crossing.optics.scales import LensScales
 from crossing.photometry.lightcurve import LightCurve
 from crossing.shooting.from_event import LocalSetup
-from crossing.shooting.random_track import RandomTrack, TrackMotion, draw_motion, event_scales, place_track
-from crossing.shooting.track import track_magnification
-from crossing.shooting.track_curve import TrackCurve
+from crossing.shooting.tracks.random_track import RandomTrack, TrackMotion, draw_motion, event_scales, place_track
+from crossing.shooting.tracks.track import track_magnification
+from crossing.shooting.tracks.track_curve import TrackCurve
 from crossing.stars.extinction import transmission
 from crossing.stars.limb_darkening import band_limb_darkening
 from crossing.stars.photosphere import ab_magnitude, blackbody_flux_njy

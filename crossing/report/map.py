@@ -4,17 +4,17 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING, Final
 
-from crossing.shooting.caustics import FLAGS as CAUSTIC_FLAGS
-from crossing.shooting.magnification_map import FLAGS
-from crossing.shooting.map_figure import figure_size, plot_map, plot_statistics
+from crossing.shooting.caustics.network import FLAGS as CAUSTIC_FLAGS
+from crossing.shooting.maps.magnification_map import FLAGS
+from crossing.shooting.maps.map_figure import figure_size, plot_map, plot_statistics
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
-    from crossing.shooting.caustics import CausticNetwork
-    from crossing.shooting.magnification_map import MagnificationMap
-    from crossing.shooting.mapping import MapPlan
-    from crossing.shooting.statistics import MapStatistics
+    from crossing.shooting.caustics.network import CausticNetwork
+    from crossing.shooting.maps.magnification_map import MagnificationMap
+    from crossing.shooting.maps.mapping import MapPlan
+    from crossing.shooting.maps.statistics import MapStatistics
 
 __all__ = ["CAUTIONS", "map_figure", "map_text", "plan_text"]
 

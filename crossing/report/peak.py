@@ -7,15 +7,15 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from crossing.shooting.peak_figure import plot_examples, plot_peaks
-from crossing.shooting.peak_result import CAUTIONS
+from crossing.shooting.peaks.peak_figure import plot_examples, plot_peaks
+from crossing.shooting.peaks.peak_result import CAUTIONS
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from matplotlib.figure import Figure
 
-    from crossing.shooting.peak_result import PeakForecast, PeakRow, Spread
+    from crossing.shooting.peaks.peak_result import PeakForecast, PeakRow, Spread
 
 __all__ = ["peak_figure", "peak_text"]
 

@@ -8,8 +8,8 @@ import numpy as np
 
 from crossing.photometry.simulated import FLAGS
 from crossing.photometry.simulated_figure import draw_fluxes, draw_magnitudes
-from crossing.shooting.map_figure import plot_map
-from crossing.shooting.track_figure import draw_path
+from crossing.shooting.maps.map_figure import plot_map
+from crossing.shooting.tracks.track_figure import draw_path
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -19,8 +19,8 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
     from crossing.photometry.simulated import SimulatedEvent
-    from crossing.shooting.caustics import CausticNetwork
-    from crossing.shooting.magnification_map import MagnificationMap
+    from crossing.shooting.caustics.network import CausticNetwork
+    from crossing.shooting.maps.magnification_map import MagnificationMap
 
 __all__ = ["CAUTIONS", "crossings_table", "placing_text", "realisations_table", "track_figure", "track_text"]
 

@@ -16,7 +16,7 @@ from crossing.shooting.field import StarField
 from crossing.stars.mass_functions import Population, from_record
 
 if TYPE_CHECKING:
-    from crossing.shooting.magnification_map import MagnificationMap
+    from crossing.shooting.maps.magnification_map import MagnificationMap
 
 __all__ = ["LocalSetup", "local_setup"]
 

@@ -18,7 +18,7 @@ import numpy as np
 
 from crossing.shooting.compiled import kernel
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map
+from crossing.shooting.maps.mapping import magnification_map
 from crossing.shooting.rays import map_grid, scratch
 from crossing.shooting.tree import Tree, build_tree, order_for
 

@@ -13,8 +13,8 @@ import time
 import numpy as np
 
 from crossing.shooting.field import StarField
-from crossing.shooting.mapping import magnification_map
-from crossing.shooting.track import track_crossings, track_magnification
+from crossing.shooting.maps.mapping import magnification_map
+from crossing.shooting.tracks.track import track_crossings, track_magnification
 
 
 def clock(function, *arguments, **options):

@@ -1,0 +1,1 @@
+"""Critical curves and caustics as polylines."""

@@ -1,0 +1,1 @@
+"""Ensembles of tracks that are kept on disk."""

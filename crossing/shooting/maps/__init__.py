@@ -1,0 +1,1 @@
+"""Magnification maps: made, kept, convolved, summarised, drawn."""

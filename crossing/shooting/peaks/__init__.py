@@ -1,0 +1,1 @@
+"""Forecast of peak magnifications, their rates and durations."""

@@ -1,0 +1,1 @@
+"""Light curves along tracks, and all images of a point."""
