@@ -33,7 +33,7 @@ _MOST_PANELS = 4000
 # Boxes that a thread sums at a time.
 _SHARE = 64
 # Curves whose own error is this share of what is allowed are halved; if that is not enough, those of smaller shares.
-_FIRST_SHARE = 0.1
+_FIRST_SHARE = 0.5
 _LAST_SHARE = 1e-3
 _MOST_ROUNDS = 14
 _MOST_POSITIONS = 1_000_000
