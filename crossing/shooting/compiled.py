@@ -8,7 +8,7 @@ from typing import Any, TypeVar
 
 import numba
 
-__all__ = ["announce_compilation", "kernel"]
+__all__ = ["announce_compilation", "kernel", "strict_kernel"]
 
 F = TypeVar("F", bound=Callable[..., object])
 
@@ -23,11 +23,24 @@ def kernel(function: F) -> F:
     Kernels run without the interpreter's lock and are serial: threads call them side by side. Where no cache folder
     can be written (a read-only installation without a home), they are compiled anew in every process.
     """
+    return _compiled(function, _OPTIONS)
+
+
+def strict_kernel(function: F) -> F:
+    """Compile like `kernel`, but fuse nothing: the same bits however the compiler puts functions into each other.
+
+    It does that in another way for functions that it has on disk, and a map that is resumed in a new process must not
+    differ in its last bits from one that was not interrupted.
+    """
+    return _compiled(function, {**_OPTIONS, "fastmath": False})
+
+
+def _compiled(function: F, options: Any) -> F:
     compiled: F
     try:
-        compiled = numba.njit(cache=True, **_OPTIONS)(function)
+        compiled = numba.njit(cache=True, **options)(function)
     except RuntimeError:
-        compiled = numba.njit(**_OPTIONS)(function)
+        compiled = numba.njit(**options)(function)
     return compiled
 
 

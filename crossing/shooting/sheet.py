@@ -9,7 +9,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from crossing.shooting.compiled import kernel
+from crossing.shooting.compiled import strict_kernel
 
 __all__ = ["sheet_deflection", "sheet_series"]
 
@@ -55,7 +55,7 @@ def _edge(one: NDArray[np.float64], two: NDArray[np.float64]) -> NDArray[np.floa
         return np.where(square == 0.0, 0.0, 0.5 * two * np.log(square)) + angle
 
 
-@kernel
+@strict_kernel
 def _edge_value(one: float, two: float) -> float:
     square = one * one + two * two
     value = 0.0
@@ -66,14 +66,14 @@ def _edge_value(one: float, two: float) -> float:
     return value
 
 
-@kernel
+@strict_kernel
 def _angle(one: float, two: float) -> float:
     if one != 0.0:
         return np.arctan(two / one)
     return 0.5 * np.pi if two > 0.0 else (-0.5 * np.pi if two < 0.0 else 0.0)
 
 
-@kernel
+@strict_kernel
 def sheet_series(
     x: float,
     y: float,

@@ -17,7 +17,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from crossing.shooting.compiled import kernel
+from crossing.shooting.compiled import strict_kernel
 from crossing.shooting.sheet import sheet_series
 
 __all__ = ["BLOCK", "RATIO", "Tree", "build_tree", "evaluate", "order_for"]
@@ -214,14 +214,14 @@ def _binomials(order: int) -> NDArray[np.float64]:
     return table
 
 
-@kernel
+@strict_kernel
 def _enlarged(array, size):
     larger = np.empty((size, *array.shape[1:]), dtype=array.dtype)
     larger[: len(array)] = array
     return larger
 
 
-@kernel
+@strict_kernel
 def _keep_near(x, y, box, lists, first, last):
     """Append to `lists` from `last` on those of its stars first:last that are near a box; return the new end."""
     cx, cy = box[0], box[1]
@@ -235,7 +235,7 @@ def _keep_near(x, y, box, lists, first, last):
     return end
 
 
-@kernel
+@strict_kernel
 def _child_box(box, side, out):
     """The lower or the upper half of a box, across its longer side; returns the axis."""
     out[:] = box
@@ -245,7 +245,7 @@ def _child_box(box, side, out):
     return axis
 
 
-@kernel
+@strict_kernel
 def _shape(x, y, root, corner, smallest):
     """Cut a box until no leaf has many near stars: `children` (see `Tree`) and the numbers of near stars."""
     a, b, has_sheet = corner
@@ -300,7 +300,7 @@ def _shape(x, y, root, corner, smallest):
     return children[:nodes].copy(), counts[:leaves].copy()
 
 
-@kernel
+@strict_kernel
 def _add_far(x, y, mass, box, lists, first, last, real, imag, lanes, sums):
     """Add those of the stars first:last that are far from a box to its series, and append the others; the new end."""
     cx, cy = box[0], box[1]
@@ -339,7 +339,7 @@ def _add_far(x, y, mass, box, lists, first, last, real, imag, lanes, sums):
     return end
 
 
-@kernel
+@strict_kernel
 def _add_powers(lanes, sums):
     """Add the terms of some stars side by side, as vectors."""
     for k in range(len(sums)):
@@ -352,7 +352,7 @@ def _add_powers(lanes, sums):
             lanes[3 * _LANES + i] = c * b + d * a
 
 
-@kernel
+@strict_kernel
 def _shift(real, imag, shift, axis, binomials, new_real, new_imag):
     """Series about a centre moved by `shift` along x (axis 0) or y."""
     order = len(real)
@@ -377,7 +377,7 @@ def _shift(real, imag, shift, axis, binomials, new_real, new_imag):
             a, b = b, -a
 
 
-@kernel
+@strict_kernel
 def _fill(x, y, mass, root, children, binomials, rank, centre, half, leaf_real, leaf_imag, near_start, near):
     """Walk through the boxes as `_shape` cut them, with their series, and write the leaves."""
     order = len(binomials)
@@ -418,13 +418,13 @@ def _fill(x, y, mass, root, children, binomials, rank, centre, half, leaf_real, 
         depth += 1
 
 
-@kernel
+@strict_kernel
 def _add_sheet(centre, a, b, kappa, inside, real, imag):
     for cell in range(len(centre)):
         sheet_series(centre[cell, 0], centre[cell, 1], a, b, kappa, inside, real.shape[1], real[cell], imag[cell])
 
 
-@kernel
+@strict_kernel
 def evaluate(x, y, tree, roots, root_node, children, stars, out):
     """Series at points: conjugate deflection of stars less sheet, its first two derivatives, and the leaf, in `out`.
 
@@ -469,7 +469,7 @@ def evaluate(x, y, tree, roots, root_node, children, stars, out):
         out[i, 4], out[i, 5] = second.real, second.imag
 
 
-@kernel
+@strict_kernel
 def _find(x, y, roots, root_node, children):
     """Leaf that holds a point, by halving the root as the tree was made; -1 outside."""
     for root in range(len(roots)):
