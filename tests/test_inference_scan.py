@@ -192,7 +192,7 @@ def test_agrees_with_nested_sampling() -> None:
     )
     sampler.run_nested(dlogz=0.02, print_progress=False)
     found = sampler.results
-    # Equal prior odds of both orientations. The issue asks for 0.2; two errors of one run are 0.35.
+    # Equal prior odds of both orientations. Asked for: 0.2; two errors of one run are 0.35.
     assert found.logzerr[-1] < 0.18
     assert one.ln_evidence == pytest.approx(found.logz[-1] - np.log(2.0), abs=0.35)
     drawn = found.samples_equal(rstate=np.random.default_rng(1))
@@ -205,7 +205,7 @@ def test_agrees_with_nested_sampling_closely(name: str) -> None:
     shape, linear, one = posterior(name)
     other = nested(shape, linear, np.random.default_rng(8), live_points=1000, precision=0.02, most_calls=5_000_000)
     assert other.complete
-    # The issue asks for 0.2; the sampler's own error must leave room for that.
+    # Asked for: 0.2; the sampler's own error must leave room for that.
     assert other.ln_evidence_error < 0.13
     assert one.ln_evidence == pytest.approx(other.ln_evidence, abs=0.2)
     rng = np.random.default_rng(4)

@@ -98,12 +98,12 @@ def test_gradient_tracks_at_any_angle_agree_with_a_map() -> None:
 @pytest.mark.slow
 @pytest.mark.parametrize("side", SIDES)
 def test_mean_along_long_tracks(side: tuple[float, float]) -> None:
-    # Discs side by side: what is between them is as good a sample.
+    # Discs side by side but for gaps: what is between them is as good a sample.
     means = []
-    for seed in range(24):
-        field = StarField.draw(*side, 0.01, (30.5, 0.5), seed=seed)
+    for seed in range(16):
+        field = StarField.draw(*side, 0.01, (10.5, 0.3), seed=seed)
         found = track_magnification(
-            field, (-30.0, 0.0), (30.0, 0.0), 0.2, positions=np.linspace(0.0, 1.0, 151), threads=1
+            field, (-10.0, 0.0), (10.0, 0.0), 1e-2, positions=np.linspace(0.0, 1.0, 2001), accuracy=3e-3, threads=1
         )
         assert found.flags == ()
         means.append(found.magnification.mean())
@@ -119,7 +119,9 @@ def test_mean_across_the_corrugated_caustic() -> None:
     gradient, means = 4.8e-7, []
     for seed in range(4):
         field = StarField.draw(kappa, gamma, 0.01, (60.0, 0.2), gradient=gradient, seed=seed)
-        found = track_magnification(field, (5.0, 0.0), (60.0, 0.0), 3e-2, threads=1)
+        found = track_magnification(
+            field, (5.0, 0.0), (60.0, 0.0), 1e-2, positions=np.linspace(0.0, 1.0, 3001), accuracy=3e-3, threads=1
+        )
         assert found.flags == ()
         # The smooth pair, 2 mu_r / sqrt(2 g u), averaged over the track.
         smooth = 2.0 / 0.6 * np.sqrt(2.0 / gradient) * (np.sqrt(60.0) - np.sqrt(5.0)) / 55.0
@@ -155,11 +157,11 @@ def fold_ensemble(curves: list[TrackCurve], radius: float, level: float) -> floa
 @pytest.mark.slow
 @pytest.mark.parametrize("side", SIDES)
 def test_tail_of_magnifications(side: tuple[float, float]) -> None:
-    radii = [1e-2, 1e-3, 1e-6]
-    curves = tracks(side, 24, 10.0, radii)
+    radii = [1e-3, 1e-4, 1e-6]
+    curves = tracks(side, 12, 10.0, radii)
     theory = float(mean_magnification(1.0 - side[0] - side[1], 1.0 - side[0] + side[1]))
     for row, radius in enumerate(radii[:2]):
-        level = 6.0 * theory if row else 3.0 * theory
+        level = 6.5 * theory
         found = float(np.mean([exceedance(curve, row, level) for curve in curves]))
         assert found == pytest.approx(fold_ensemble(curves, radius, level), rel=0.15)
     level = 60.0 * theory
