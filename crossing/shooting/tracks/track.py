@@ -35,7 +35,7 @@ _SHARE = 64
 # Curves whose own error is this share of what is allowed are halved; if that is not enough, those of smaller shares.
 _FIRST_SHARE = 0.5
 _LAST_SHARE = 1e-3
-_MOST_ROUNDS = 14
+_MOST_ROUNDS = 40
 _MOST_POSITIONS = 1_000_000
 # The centre's line is moved by this share of the smallest radius, off the symmetry of fields that have one.
 _OFF_CENTRE = 1.37e-4
