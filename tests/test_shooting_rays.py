@@ -7,7 +7,7 @@ import pytest
 from twins import source_positions
 
 from crossing.shooting.field import StarField
-from crossing.shooting.rays import map_grid, scratch
+from crossing.shooting.rays import VECTOR, map_grid, scratch
 
 
 def field(gradient=None, accuracy=1e-9, seed=2):
@@ -23,11 +23,12 @@ def grid(stars, tree, leaf, nx, ny, scale, part=1.0):
     size = 2 * part * tree.half[leaf]
     x0, y0 = tree.centre[leaf] - tree.half[leaf]
     dx, dy = size[0] / max(1, nx - 1), size[1] / max(1, ny - 1)
-    u, v = np.full((ny + 2, nx + 3), np.nan), np.full((ny + 2, nx + 3), np.nan)
+    room = (nx + VECTOR - 1) // VECTOR * VECTOR
+    u, v = np.full((ny + 2, room + 3), np.nan), np.full((ny + 2, room + 3), np.nan)
     work = scratch(tree.real.shape[1], max(nx, ny))
     map_grid(stars.lens_numbers, tree.arrays, leaf, stars.stars, x0, y0, dx, dy, nx, ny, scale, work, u, v)
     assert np.isnan(u[ny:]).all()
-    assert np.isnan(v[:, nx:]).all()
+    assert np.isnan(v[:, room:]).all()
     x, y = np.meshgrid(x0 + dx * np.arange(nx), y0 + dy * np.arange(ny))
     return x, y, u[:ny, :nx], v[:ny, :nx]
 

@@ -12,78 +12,107 @@ import numpy as np
 from crossing.shooting.compiled import kernel
 from crossing.shooting.tree import RATIO
 
-__all__ = ["map_grid", "scratch"]
+__all__ = ["VECTOR", "map_grid", "scratch"]
 
-# Terms of the series of a small grid, rays that are evaluated together, and the numbers of a vector.
+VECTOR = 8
+"""Rays of a row come in multiples of this; arrays of results must have room for them."""
+# Terms of the series of a small grid, and its rays that are evaluated together.
 _FEW = 8
 _CHUNK = 128
-_VECTOR = 8
 
 
 @kernel
 def scratch(order, side):
-    """Work space of `map_grid` for series of `order` terms and grids of up to `side` rays a side."""
-    return np.empty((2 * order + 4, max(_CHUNK, side + _VECTOR)))
+    """Work space of `map_grid` for series of `order` terms and grids of up to `side` rays a side.
+
+    Two series of `order` rows, four rows for points, and binom(k + m, m) in row k and column m of the rest.
+    """
+    work = np.empty((3 * order + 4, max(_CHUNK, side + VECTOR, order + 4)))
+    binomial = work[2 * order + 4 :]
+    for k in range(order):
+        for m in range(order + 4):
+            binomial[k, m] = binomial[k, m - 1] + binomial[k - 1, m] if k > 0 and m > 0 else 1.0
+    return work
 
 
 @kernel
-def _shift_rows(real, imag, offset, rows, u, v):
-    """Series about a centre, moved by i * offset: u = -Re and v = Im as polynomials of the distance along the row."""
+def _rows(real, imag, scale, offset, rows, work):
+    """Series about a centre, times scale, on rows at i * offset: -Re and Im as polynomials of the distance along a row.
+
+    Term k of a row is a polynomial of its offset, with the coefficients binom(k + m, m) c_(k + m) i^m.
+    """
     order = len(real)
+    a, b, binomial = work[:order], work[order : 2 * order], work[2 * order + 4 :]
+    re, im = np.zeros(order + 4), np.zeros(order + 4)
+    for n in range(order):
+        re[n], im[n] = scale * real[n], scale * imag[n]
     for k in range(order):
         for r in range(rows):
-            u[k, r] = -real[k]
-            v[k, r] = imag[k]
-    for i in range(order - 1):
-        for k in range(order - 2, i - 1, -1):
+            a[k, r] = 0.0
+            b[k, r] = 0.0
+        for m in range((order - k - 1) // 4 * 4, -1, -4):
+            n = k + m
+            f0, f1, f2, f3 = binomial[k, m], binomial[k, m + 1], binomial[k, m + 2], binomial[k, m + 3]
+            a0, a1, a2, a3 = -f0 * re[n], f1 * im[n + 1], f2 * re[n + 2], -f3 * im[n + 3]
+            b0, b1, b2, b3 = f0 * im[n], f1 * re[n + 1], -f2 * im[n + 2], -f3 * re[n + 3]
             for r in range(rows):
-                a, b = u[k + 1, r], v[k + 1, r]
-                u[k, r] += offset[r] * b
-                v[k, r] -= offset[r] * a
+                y, s, t = offset[r], a[k, r], b[k, r]
+                a[k, r] = (((s * y + a3) * y + a2) * y + a1) * y + a0
+                b[k, r] = (((t * y + b3) * y + b2) * y + b1) * y + b0
 
 
 @kernel
-def _row(distance, count, a, b, order, u, v):
-    """Polynomials a, b at `count` distances along one row."""
+def _row(distance, count, a, b, order, r, u, v):
+    """Polynomials of row r at `count` distances along it."""
     k = order - 8
-    a0, a1, a2, a3, a4, a5, a6, a7 = a[k], a[k + 1], a[k + 2], a[k + 3], a[k + 4], a[k + 5], a[k + 6], a[k + 7]
-    b0, b1, b2, b3, b4, b5, b6, b7 = b[k], b[k + 1], b[k + 2], b[k + 3], b[k + 4], b[k + 5], b[k + 6], b[k + 7]
+    a0, a1, a2, a3, a4, a5, a6, a7 = _eight(a, k, r)
+    b0, b1, b2, b3, b4, b5, b6, b7 = _eight(b, k, r)
     for j in range(count):
         x = distance[j]
-        u[j] = ((((((a7 * x + a6) * x + a5) * x + a4) * x + a3) * x + a2) * x + a1) * x + a0
-        v[j] = ((((((b7 * x + b6) * x + b5) * x + b4) * x + b3) * x + b2) * x + b1) * x + b0
+        u[r, j] = ((((((a7 * x + a6) * x + a5) * x + a4) * x + a3) * x + a2) * x + a1) * x + a0
+        v[r, j] = ((((((b7 * x + b6) * x + b5) * x + b4) * x + b3) * x + b2) * x + b1) * x + b0
     for k in range(order - 16, -1, -8):
-        a0, a1, a2, a3, a4, a5, a6, a7 = a[k], a[k + 1], a[k + 2], a[k + 3], a[k + 4], a[k + 5], a[k + 6], a[k + 7]
-        b0, b1, b2, b3, b4, b5, b6, b7 = b[k], b[k + 1], b[k + 2], b[k + 3], b[k + 4], b[k + 5], b[k + 6], b[k + 7]
+        a0, a1, a2, a3, a4, a5, a6, a7 = _eight(a, k, r)
+        b0, b1, b2, b3, b4, b5, b6, b7 = _eight(b, k, r)
         for j in range(count):
-            x, s, t = distance[j], u[j], v[j]
-            u[j] = (((((((s * x + a7) * x + a6) * x + a5) * x + a4) * x + a3) * x + a2) * x + a1) * x + a0
-            v[j] = (((((((t * x + b7) * x + b6) * x + b5) * x + b4) * x + b3) * x + b2) * x + b1) * x + b0
+            x, s, t = distance[j], u[r, j], v[r, j]
+            u[r, j] = (((((((s * x + a7) * x + a6) * x + a5) * x + a4) * x + a3) * x + a2) * x + a1) * x + a0
+            v[r, j] = (((((((t * x + b7) * x + b6) * x + b5) * x + b4) * x + b3) * x + b2) * x + b1) * x + b0
 
 
 @kernel
-def _add_near_row(distance, count, near_x, near_y, near_mass, near_count, u, v):
-    """Subtract the deflection by stars at a height near_y above a row."""
+def _eight(a, k, r):
+    return a[k, r], a[k + 1, r], a[k + 2, r], a[k + 3, r], a[k + 4, r], a[k + 5, r], a[k + 6, r], a[k + 7, r]
+
+
+@kernel
+def _add_near_row(distance, count, near, near_count, y, r, u, v):
+    """Subtract the deflection by stars (x, y, mass) from row r, which is at the height y."""
     i = 0
-    while i + 1 < near_count:
-        # Two stars share one division.
-        xa, ya, ma = near_x[i], near_y[i], near_mass[i]
-        xb, yb, mb = near_x[i + 1], near_y[i + 1], near_mass[i + 1]
+    while i + 3 < near_count:
+        # Four stars share one division.
+        xa, ya, ma = near[0, i], near[1, i] - y, near[2, i]
+        xb, yb, mb = near[0, i + 1], near[1, i + 1] - y, near[2, i + 1]
+        xc, yc, mc = near[0, i + 2], near[1, i + 2] - y, near[2, i + 2]
+        xd, yd, md = near[0, i + 3], near[1, i + 3] - y, near[2, i + 3]
+        for j in range(count):
+            da, db, dc, dd = distance[j] - xa, distance[j] - xb, distance[j] - xc, distance[j] - xd
+            sa, sb, sc, sd = da * da + ya * ya, db * db + yb * yb, dc * dc + yc * yc, dd * dd + yd * yd
+            ab, cd = sa * sb, sc * sd
+            each = 1.0 / (ab * cd)
+            u[r, j] -= ((ma * da * sb + mb * db * sa) * cd + (mc * dc * sd + md * dd * sc) * ab) * each
+            v[r, j] += ((ma * ya * sb + mb * yb * sa) * cd + (mc * yc * sd + md * yd * sc) * ab) * each
+        i += 4
+    while i < near_count:
+        xa, ya, ma = near[0, i], near[1, i] - y, near[2, i]
+        xb, yb, mb = (near[0, i + 1], near[1, i + 1] - y, near[2, i + 1]) if i + 1 < near_count else (0.0, 1.0, 0.0)
         for j in range(count):
             da, db = distance[j] - xa, distance[j] - xb
             sa, sb = da * da + ya * ya, db * db + yb * yb
-            both = 1.0 / (sa * sb)
-            qa, qb = ma * sb * both, mb * sa * both
-            u[j] = u[j] - da * qa - db * qb
-            v[j] = v[j] + ya * qa + yb * qb
+            each = 1.0 / (sa * sb)
+            u[r, j] -= (ma * da * sb + mb * db * sa) * each
+            v[r, j] += (ma * ya * sb + mb * yb * sa) * each
         i += 2
-    if i < near_count:
-        xa, ya, ma = near_x[i], near_y[i], near_mass[i]
-        for j in range(count):
-            da = distance[j] - xa
-            qa = ma / (da * da + ya * ya)
-            u[j] = u[j] - da * qa
-            v[j] = v[j] + ya * qa
 
 
 @kernel
@@ -133,7 +162,7 @@ def map_grid(lens, tree, leaf, stars, x0, y0, dx, dy, nx, ny, scale, work, u, v)
     work : ndarray
         See `scratch`.
     u, v : (>= ny, >= nx) ndarray
-        Results.
+        Results; rows have room for a multiple of `VECTOR`.
     """
     centre, half, inside, real, imag, near_start, near = tree
     order = real.shape[1]
@@ -155,42 +184,31 @@ def map_grid(lens, tree, leaf, stars, x0, y0, dx, dy, nx, ny, scale, work, u, v)
 @kernel
 def _large(lens, sheet, real, imag, centre, stars, own, x0, y0, dx, dy, nx, ny, scale, work, u, v):
     """A grid by the leaf's own series."""
-    order = len(real)
+    order, count = len(real), len(own)
     cx, cy = centre[0], centre[1]
-    a, b = work[:order], work[order : 2 * order]
-    distance, offset, line_u, line_v = work[2 * order], work[2 * order + 1], work[2 * order + 2], work[2 * order + 3]
-    row_a, row_b = np.empty(order), np.empty(order)
-    count, whole = len(own), (nx + _VECTOR - 1) // _VECTOR * _VECTOR
-    near_x, near_y, near_mass, below = np.empty(count), np.empty(count), np.empty(count), np.empty(count)
+    a, b, distance, offset = work[:order], work[order : 2 * order], work[2 * order], work[2 * order + 1]
+    near = np.empty((3, count))
     for i in range(count):
-        near_x[i] = stars[0][own[i]] - cx
-        near_y[i] = stars[1][own[i]]
-        near_mass[i] = stars[2][own[i]] * scale[2]
+        near[0, i] = stars[0][own[i]] - cx
+        near[1, i] = stars[1][own[i]] - cy
+        near[2, i] = stars[2][own[i]] * scale[2]
+    whole, rows = (nx + VECTOR - 1) // VECTOR * VECTOR, (ny + VECTOR - 1) // VECTOR * VECTOR
     for j in range(whole):
         distance[j] = x0 + j * dx - cx
-    for r in range(ny):
+    for r in range(rows):
         offset[r] = y0 + r * dy - cy
-    _shift_rows(real, imag, offset, ny, a, b)
+    _rows(real, imag, scale[2], offset, rows, work)
     lam_t, lam_r, gx, gy = lens[0] + sheet, lens[1] + sheet, lens[2], lens[3]
     for r in range(ny):
         y = cy + offset[r]
-        for k in range(order):
-            row_a[k], row_b[k] = a[k, r], b[k, r]
-        row_a[0] += lam_t * cx + 0.5 * gx * cx * cx + gy * cx * y - scale[0]
-        row_a[1] += lam_t + gx * cx + gy * y
-        row_a[2] += 0.5 * gx
-        row_b[0] += lam_r * y + 0.5 * gy * cx * cx - scale[1]
-        row_b[1] += gy * cx
-        row_b[2] += 0.5 * gy
-        for k in range(order):
-            row_a[k] *= scale[2]
-            row_b[k] *= scale[2]
-        for i in range(count):
-            below[i] = near_y[i] - y
-        _row(distance, whole, row_a, row_b, order, line_u, line_v)
-        _add_near_row(distance, whole, near_x, below, near_mass, count, line_u, line_v)
-        for j in range(nx):
-            u[r, j], v[r, j] = line_u[j], line_v[j]
+        a[0, r] += scale[2] * (lam_t * cx + 0.5 * gx * cx * cx + gy * cx * y - scale[0])
+        a[1, r] += scale[2] * (lam_t + gx * cx + gy * y)
+        a[2, r] += scale[2] * 0.5 * gx
+        b[0, r] += scale[2] * (lam_r * y + 0.5 * gy * cx * cx - scale[1])
+        b[1, r] += scale[2] * gy * cx
+        b[2, r] += scale[2] * 0.5 * gy
+        _row(distance, whole, a, b, order, r, u, v)
+        _add_near_row(distance, whole, near, count, offset[r], r, u, v)
 
 
 @kernel
@@ -239,7 +257,7 @@ def _small(lens, sheet, real, imag, x, y, stars, own, reach, box, nx, ny, scale,
     for k in range(_FEW):
         a[k] *= -scale[2]
         b[k] *= scale[2]
-    first = work.shape[0] - 4
+    first = 2 * len(real)
     px, py, line_u, line_v = work[first], work[first + 1], work[first + 2], work[first + 3]
     held, row, column = 0, 0, 0
     for r in range(ny):
@@ -248,7 +266,7 @@ def _small(lens, sheet, real, imag, x, y, stars, own, reach, box, nx, ny, scale,
             held += 1
             if held < _CHUNK and (r < ny - 1 or j < nx - 1):
                 continue
-            whole = (held + _VECTOR - 1) // _VECTOR * _VECTOR
+            whole = (held + VECTOR - 1) // VECTOR * VECTOR
             px[held:whole] = px[0]
             py[held:whole] = py[0]
             _short(px, py, whole, a, b, smooth, line_u, line_v)

@@ -10,8 +10,8 @@ from __future__ import annotations
 import numpy as np
 
 from crossing.shooting.compiled import kernel
-from crossing.shooting.maps.edges import add_edge, add_points
-from crossing.shooting.rays import map_grid, scratch
+from crossing.shooting.maps.edges import add_edge, add_edges, add_points
+from crossing.shooting.rays import VECTOR, map_grid, scratch
 
 __all__ = ["LOOK", "TILE", "deposit_leaves"]
 
@@ -26,6 +26,21 @@ _MOST_FINER = 64
 # between them, so that their errors cancel where those of a cut cell do not.
 _SLACK = 4.0
 _PIECES = 4
+# Lagrange weights of four nodes, at points on the first, second and third of the three stretches between them.
+_CUBIC = np.array(
+    [
+        [
+            [
+                -(t - 1.0) * (t - 2.0) * (t - 3.0) / 6.0,
+                t * (t - 2.0) * (t - 3.0) / 2.0,
+                -t * (t - 1.0) * (t - 3.0) / 2.0,
+                t * (t - 1.0) * (t - 2.0) / 6.0,
+            ]
+            for t in stretch + np.arange(_PIECES + 1) / _PIECES
+        ]
+        for stretch in range(3)
+    ]
+)
 _HIGHEST_WEIGHT = 1.5
 _SHARE = 0.1
 # A triangle that would be magnified more than this is laid down as points along itself: see the design of the sum.
@@ -61,11 +76,14 @@ def deposit_leaves(leaves, lens, tree, stars, scale, spacing, tolerance, mean, b
     centre, half, _, real, _, near_start, near_all = tree
     side = TILE + 1
     work = scratch(real.shape[1], side)
-    u, v = np.empty((side, side)), np.empty((side, side))
+    wide = side + VECTOR - 1
+    u, v = np.empty((side, wide)), np.empty((side, wide))
     one, two = np.empty((side, side)), np.empty((side, side))
     forced, state = np.zeros((side, side), dtype=np.bool_), np.zeros((LOOK, LOOK), dtype=np.int8)
     good = np.zeros((side + 1, side + 1), dtype=np.bool_)
     line = np.empty((2, _PIECES + 1))
+    edges, weight = np.empty((2, 3 * side * side), dtype=np.int64), np.empty(3 * side * side)
+    pixel, flat = np.empty((side, wide), dtype=np.int64), buffer.reshape(-1)
     stack = np.empty((_STACK, 7))
     escape = np.empty(len(stars[0]))
     rows, columns = buffer.shape[0], buffer.shape[1] - 1
@@ -78,19 +96,19 @@ def deposit_leaves(leaves, lens, tree, stars, scale, spacing, tolerance, mean, b
         depth = 1
         while depth > 0:
             depth -= 1
-            x0, y0, wide, high = stack[depth, 0], stack[depth, 1], stack[depth, 2], stack[depth, 3]
+            x0, y0, across, up = stack[depth, 0], stack[depth, 1], stack[depth, 2], stack[depth, 3]
             nx, ny, allowed = int(stack[depth, 4]), int(stack[depth, 5]), stack[depth, 6]
             if nx == 0:
-                hx, hy = wide / LOOK, high / LOOK
+                hx, hy = across / LOOK, up / LOOK
                 map_grid(lens, tree, leaf, stars, x0, y0, hx, hy, LOOK + 1, LOOK + 1, scale, work, u, v)
                 tally[0] += (LOOK + 1) ** 2
                 _mark_stars(forced, LOOK, LOOK, x0, y0, hx, hy, stars, near)
                 area, bend = 0.5 * hx * hy * scale[2] ** 2, _bend(lens, hx, hy, scale[2])
                 finer = _plan(forced, state, u, v, spacing / max(hx, hy), area, max(hx / hy, hy / hx), bend, tolerance,
                     mean, rows, columns)  # fmt: skip
-                depth = _push_tiles(stack, depth, state, x0, y0, wide, high, spacing, finer)
+                depth = _push_tiles(stack, depth, state, x0, y0, across, up, spacing, finer)
                 continue
-            hx, hy = wide / nx, high / ny
+            hx, hy = across / nx, up / ny
             map_grid(lens, tree, leaf, stars, x0, y0, hx, hy, nx + 1, ny + 1, scale, work, u, v)
             tally[0] += (nx + 1) * (ny + 1)
             _mark_stars(forced, nx, ny, x0, y0, hx, hy, stars, near)
@@ -100,8 +118,9 @@ def deposit_leaves(leaves, lens, tree, stars, scale, spacing, tolerance, mean, b
                 stack, depth, forced, good, u, v, nx, ny, box, area, mean, tolerance, allowed, stars, near, escape,
                 rows, columns, 1e-12 * half[leaf, 0], tally,
             )  # fmt: skip
-            tally[1] += _densities(buffer, nx, ny, u, v, good, one, two, area, line, allowed < _SLACK)
-            _edges(buffer, nx, ny, u, v, good, one, two, line, allowed < _SLACK)
+            _pixels(pixel, u, v, nx, ny, rows, columns)
+            tally[1] += _densities(buffer, flat, nx, ny, u, v, pixel, good, one, two, area, line, allowed < _SLACK)
+            _edges(buffer, nx, ny, u, v, pixel, good, one, two, line, allowed < _SLACK, edges, weight)
 
 
 @kernel
@@ -118,7 +137,7 @@ def _sag(u, v, i, j, aspect, bend):
     """
     twist_u = u[i, j] - u[i, j + 1] - u[i + 1, j] + u[i + 1, j + 1]
     twist_v = v[i, j] - v[i, j + 1] - v[i + 1, j] + v[i + 1, j + 1]
-    return 0.25 * np.hypot(twist_u, twist_v) * aspect + bend
+    return 0.25 * np.sqrt(twist_u * twist_u + twist_v * twist_v) * aspect + bend
 
 
 @kernel
@@ -250,18 +269,18 @@ def _curve(line, u, v, i, j, along_row, n):
     """Points on the mapped edge that starts at node (i, j): cubic interpolation through four nodes of its line."""
     k = j if along_row else i
     first = min(max(k - 1, 0), n - 3)
-    for piece in range(_PIECES + 1):
-        t = k - first + piece / _PIECES
-        w0 = -(t - 1.0) * (t - 2.0) * (t - 3.0) / 6.0
-        w1 = t * (t - 2.0) * (t - 3.0) / 2.0
-        w2 = -t * (t - 1.0) * (t - 3.0) / 2.0
-        w3 = t * (t - 1.0) * (t - 2.0) / 6.0
-        if along_row:
-            line[0, piece] = w0 * u[i, first] + w1 * u[i, first + 1] + w2 * u[i, first + 2] + w3 * u[i, first + 3]
-            line[1, piece] = w0 * v[i, first] + w1 * v[i, first + 1] + w2 * v[i, first + 2] + w3 * v[i, first + 3]
-        else:
-            line[0, piece] = w0 * u[first, j] + w1 * u[first + 1, j] + w2 * u[first + 2, j] + w3 * u[first + 3, j]
-            line[1, piece] = w0 * v[first, j] + w1 * v[first + 1, j] + w2 * v[first + 2, j] + w3 * v[first + 3, j]
+    down, right = (0, 1) if along_row else (1, 0)
+    row, column = (i, first) if along_row else (first, j)
+    line[0, 0], line[1, 0] = u[i, j], v[i, j]
+    line[0, _PIECES], line[1, _PIECES] = u[i + down, j + right], v[i + down, j + right]
+    line[:, 1:_PIECES] = 0.0
+    for node in range(4):
+        a, b = u[row, column], v[row, column]
+        for piece in range(1, _PIECES):
+            weight = _CUBIC[k - first, piece, node]
+            line[0, piece] += weight * a
+            line[1, piece] += weight * b
+        row, column = row + down, column + right
 
 
 @kernel
@@ -276,10 +295,20 @@ def _bulge(line, u, v, i, j, along_row, n):
 
 
 @kernel
-def _densities(buffer, nx, ny, u, v, good, one, two, area, line, straight):
+def _pixels(pixel, u, v, nx, ny, rows, columns):
+    """Place in the flat buffer of the pixel that each corner lands in, negative beside the window."""
+    for i in range(ny + 1):
+        for j in range(nx + 1):
+            inside = u[i, j] >= 0.0 and u[i, j] < columns and v[i, j] >= 0.0 and v[i, j] < rows
+            pixel[i, j] = int(v[i, j]) * (columns + 1) + int(u[i, j]) if inside else -1
+
+
+@kernel
+def _densities(buffer, flat, nx, ny, u, v, pixel, good, one, two, area, line, straight):
     """Image area over signed source area of the two triangles of every good cell; returns the number of good cells.
 
-    Edges towards cells that are not good follow the curve, so that cells of different sizes meet without gaps.
+    Cells that land in one pixel are laid down at once, and have no edges. Edges towards cells that are not good follow
+    the curve, so that cells of different sizes meet without gaps.
     """
     laid = 0
     for i in range(ny):
@@ -289,6 +318,11 @@ def _densities(buffer, nx, ny, u, v, good, one, two, area, line, straight):
             if not good[i + 1, j + 1]:
                 continue
             laid += 1
+            place = pixel[i, j]
+            if place >= 0 and place == pixel[i, j + 1] and place == pixel[i + 1, j] and place == pixel[i + 1, j + 1]:
+                flat[place] += 2.0 * area
+                flat[place + 1] -= 2.0 * area
+                continue
             ax, ay, bx, by = u[i, j], v[i, j], u[i, j + 1], v[i, j + 1]
             cx, cy, dx, dy = u[i + 1, j + 1], v[i + 1, j + 1], u[i + 1, j], v[i + 1, j]
             lower = 0.5 * ((bx - ax) * (cy - ay) - (cx - ax) * (by - ay))
@@ -323,27 +357,35 @@ def _open_edge(buffer, line, u, v, i, j, along_row, n, weight):
 
 
 @kernel
-def _edges(buffer, nx, ny, u, v, good, one, two, line, straight):
-    """Every edge of a block once, with the difference of the densities on its two sides."""
+def _edges(buffer, nx, ny, u, v, pixel, good, one, two, line, straight, edges, weight):
+    """Every edge of a block once, with the difference of the densities on its two sides.
+
+    Edges between good cells are listed first: lists are made without a branch, and laid down in one loop.
+    """
+    side, first, second, count = u.shape[1], edges[0], edges[1], 0
     for i in range(ny + 1):
         for j in range(nx):
             below, above = good[i, j + 1], good[i + 1, j + 1]
-            weight = (one[i, j] if above else 0.0) - (two[i - 1, j] if below else 0.0)
-            if (above and below) or (straight and (i == 0 or i == ny)):
-                add_edge(buffer, u[i, j], v[i, j], u[i, j + 1], v[i, j + 1], weight)
-            elif above or below:
-                _open_edge(buffer, line, u, v, i, j, True, nx, weight)
+            w = (one[i, j] if above else 0.0) - (two[i - 1, j] if below else 0.0)
+            first[count], second[count], weight[count] = i * side + j, i * side + j + 1, w
+            closed = (above and below) or (straight and (i == 0 or i == ny))
+            count += closed and w != 0.0
+            if w != 0.0 and not closed:
+                _open_edge(buffer, line, u, v, i, j, True, nx, w)
     for i in range(ny):
         for j in range(nx + 1):
             left, right = good[i + 1, j], good[i + 1, j + 1]
-            weight = (one[i, j - 1] if left else 0.0) - (two[i, j] if right else 0.0)
-            if (left and right) or (straight and (j == 0 or j == nx)):
-                add_edge(buffer, u[i, j], v[i, j], u[i + 1, j], v[i + 1, j], weight)
-            elif left or right:
-                _open_edge(buffer, line, u, v, i, j, False, ny, weight)
+            w = (one[i, j - 1] if left else 0.0) - (two[i, j] if right else 0.0)
+            first[count], second[count], weight[count] = i * side + j, (i + 1) * side + j, w
+            closed = (left and right) or (straight and (j == 0 or j == nx))
+            count += closed and w != 0.0
+            if w != 0.0 and not closed:
+                _open_edge(buffer, line, u, v, i, j, False, ny, w)
         for j in range(nx):
-            if good[i + 1, j + 1]:
-                add_edge(buffer, u[i, j], v[i, j], u[i + 1, j + 1], v[i + 1, j + 1], two[i, j] - one[i, j])
+            w = two[i, j] - one[i, j]
+            first[count], second[count], weight[count] = i * side + j, (i + 1) * side + j + 1, w
+            count += w != 0.0
+    add_edges(buffer, u.reshape(-1), v.reshape(-1), pixel.reshape(-1), first, second, weight, count)
 
 
 @kernel

@@ -6,7 +6,7 @@ import numpy as np
 
 from crossing.shooting.compiled import kernel
 
-__all__ = ["add_edge", "add_points", "running_sum"]
+__all__ = ["add_edge", "add_edges", "add_points", "running_sum"]
 
 
 @kernel
@@ -22,9 +22,6 @@ def add_edge(buffer, x0, y0, x1, y1, weight):
     if y1 <= 0.0 or y0 >= rows or (x0 >= columns and x1 >= columns):
         return
     slope = (x1 - x0) / (y1 - y0)
-    if y0 >= 0.0 and y1 < rows and min(x0, x1) >= 0.0 and max(x0, x1) < columns:
-        _inner_edge(buffer, x0, y0, x1, y1, slope, weight)
-        return
     y, x = y0, x0
     if y < 0.0:
         x -= y * slope
@@ -40,41 +37,101 @@ def add_edge(buffer, x0, y0, x1, y1, weight):
 
 
 @kernel
-def _inner_edge(buffer, x0, y0, x1, y1, slope, weight):
-    """An edge that runs upwards inside the window."""
-    row, last = int(y0), int(y1)
-    y, x = y0, x0
-    while True:
-        if row == last:
-            y_next, x_next = y1, x1
-        else:
-            y_next = row + 1.0
-            x_next = x0 + (y_next - y0) * slope
-        low, high = (x, x_next) if x < x_next else (x_next, x)
-        part = weight * (y_next - y)
-        column, end = int(low), int(high)
+def add_edges(buffer, u, v, pixel, first, second, weight, count):
+    """Add many edges between corners of a block.
+
+    Parameters
+    ----------
+    buffer : (rows, columns + 1) ndarray
+        Added to.
+    u, v, pixel : (n,) ndarray
+        Corners, and their places in the flat buffer; negative beside the window.
+    first, second, weight : (>= count,) ndarray
+        Ends of the edges, and weights.
+    count : int
+        Number of edges.
+    """
+    flat, stride = buffer.reshape(-1), buffer.shape[1]
+    for edge in range(count):
+        a, b, w = first[edge], second[edge], weight[edge]
+        x0, y0, x1, y1 = u[a], v[a], u[b], v[b]
+        place = pixel[a]
+        if place < 0 or pixel[b] < 0:
+            add_edge(buffer, x0, y0, x1, y1, w)
+            continue
+        column = int(x0)
+        if place == pixel[b]:
+            part = w * (y0 - y1)
+            right = part * (0.5 * (x0 + x1) - column)
+            flat[place] += part - right
+            flat[place + 1] += right
+            continue
+        if y0 > y1:
+            x0, y0, x1, y1, w = x1, y1, x0, y0, -w
+            place, column = pixel[b], int(x0)
+        end = int(x1)
         if column == end:
-            right = part * (0.5 * (low + high) - column)
-            buffer[row, column] += part - right
-            buffer[row, column + 1] += right
+            _in_column(flat, stride, place, column, x0, y0, x1, y1, -w)
         else:
-            # The parts of both sides of a column's edge; all but the first and the last column are crossed fully.
-            per_column = part / (high - low)
-            piece = per_column * (column + 1.0 - low)
-            right = piece * 0.5 * (1.0 + low - column)
-            buffer[row, column] += piece - right
-            carried = right
-            for middle in range(column + 1, end):
-                buffer[row, middle] += carried + 0.5 * per_column
-                carried = 0.5 * per_column
-            piece = per_column * (high - end)
-            right = piece * 0.5 * (high - end)
-            buffer[row, end] += carried + piece - right
-            buffer[row, end + 1] += right
-        if row == last:
-            return
-        y, x = y_next, x_next
-        row += 1
+            _across(flat, stride, x0, y0, x1, y1, -w)
+
+
+@kernel
+def _in_column(flat, stride, place, column, x0, y0, x1, y1, weight):
+    """Add an edge that runs upwards within one column, through two or more rows."""
+    row, last = int(y0), int(y1)
+    slope = (x1 - x0) / (y1 - y0)
+    part = weight * (row + 1 - y0)
+    right = part * (x0 + 0.5 * (row + 1 - y0) * slope - column)
+    flat[place] += part - right
+    flat[place + 1] += right
+    offset = x0 + (0.5 - y0) * slope - column
+    for between in range(row + 1, last):
+        place += stride
+        right = weight * (offset + between * slope)
+        flat[place] += weight - right
+        flat[place + 1] += right
+    place, part = place + stride, weight * (y1 - last)
+    right = part * (x1 - 0.5 * (y1 - last) * slope - column)
+    flat[place] += part - right
+    flat[place + 1] += right
+
+
+@kernel
+def _across(flat, stride, x0, y0, x1, y1, weight):
+    """Add an edge that runs upwards through two or more rows and columns."""
+    row, last, column = int(y0), int(y1), int(x0)
+    slope, y, x = (x1 - x0) / (y1 - y0), y0, x0
+    for between in range(row, last + 1):
+        y_next = between + 1.0 if between < last else y1
+        x_next = x0 + (y_next - y0) * slope if between < last else x1
+        end, start, part = int(x_next), between * stride, weight * (y_next - y)
+        if column == end:
+            right = part * (0.5 * (x + x_next) - column)
+            flat[start + column] += part - right
+            flat[start + column + 1] += right
+        elif column < end:
+            _in_row(flat, start, column, end, x, x_next, part)
+        else:
+            _in_row(flat, start, end, column, x_next, x, part)
+        y, x, column = y_next, x_next, end
+
+
+@kernel
+def _in_row(flat, start, column, end, x0, x1, part):
+    """Add a piece of an edge from left to right within one row, which stands for the signed height `part`."""
+    # The parts of both sides of a column's edge; all but the first and the last column are crossed fully.
+    per_column = part / (x1 - x0)
+    piece = per_column * (column + 1 - x0)
+    carried = piece * 0.5 * (1.0 + x0 - column)
+    flat[start + column] += piece - carried
+    for middle in range(column + 1, end):
+        flat[start + middle] += carried + 0.5 * per_column
+        carried = 0.5 * per_column
+    piece = per_column * (x1 - end)
+    right = piece * 0.5 * (x1 - end)
+    flat[start + end] += carried + piece - right
+    flat[start + end + 1] += right
 
 
 @kernel

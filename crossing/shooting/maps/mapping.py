@@ -42,7 +42,7 @@ _MOST_PASSES = 3
 _SLACK = 1.2
 _LARGEST_STEP = 30.0
 # Sag times density that gives about the relative error 1, and the largest cell in pixels; see DEVELOPERS.md.
-_TOLERANCE = 0.5
+_TOLERANCE = 0.42
 _LARGEST_CELL = 16.0
 _CHECKPOINT_SECONDS = 15.0
 
