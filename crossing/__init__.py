@@ -10,13 +10,16 @@ from typing import Any
 
 _HOME = {
     # files
+    "read_campaign": "crossing.event",
     "read_event": "crossing.event",
     "read_lightcurve": "crossing.photometry",
     # optics
     "LocalLens": "crossing.optics.local",
+    "describe_macro": "crossing.optics.macro.macro_describe",
     "effective_velocity": "crossing.optics.motion",
     "einstein_radius": "crossing.optics.scales",
     "fold_magnification": "crossing.optics.fold",
+    "intrinsic_knot": "crossing.optics.macro.intrinsic",
     # star fields
     "MagnificationMap": "crossing.shooting.maps.magnification_map",
     "StarField": "crossing.shooting.field",
@@ -28,6 +31,8 @@ _HOME = {
     "trace_caustics": "crossing.shooting.caustics.network",
     "track_crossings": "crossing.shooting.tracks.track",
     "track_magnification": "crossing.shooting.tracks.track",
+    # rates
+    "predict_rates": "crossing.population.event_rates",
     # inference
     "FitPriors": "crossing.inference",
     "fit_crossing": "crossing.inference",
@@ -45,13 +50,17 @@ __all__ = [
     "StarField",
     "TrackCurve",
     "count_images",
+    "describe_macro",
     "effective_velocity",
     "einstein_radius",
     "fit_crossing",
     "fold_magnification",
     "forecast_peaks",
+    "intrinsic_knot",
     "load_tracks",
     "magnification_map",
+    "predict_rates",
+    "read_campaign",
     "read_event",
     "read_lightcurve",
     "trace_caustics",

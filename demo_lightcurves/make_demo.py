@@ -3,6 +3,8 @@
 Everything here is made up: no real cluster, arc, star or survey. Run it again and the same files come out:
 
     python demo_lightcurves/make_demo.py
+
+The events with maps of lens models and with mirrored knots are written by make_macro_demo.py.
 """
 
 from __future__ import annotations
@@ -29,7 +31,7 @@ LIMB = 0.35
 NOTE = "invented for demonstration; no real cluster, arc, star or survey"
 
 SCENE = f"""# Invented for demonstration: no real cluster, arc, star or survey.
-# Written by make_demo.py; the truth is in {{name}}.truth.json.
+# Written by {{script}}; the truth is in {{name}}.truth.json.
 
 [event]
 name = "{{title}} (invented)"
@@ -40,10 +42,7 @@ redshift = {Z_LENS}
 [source]
 redshift = {Z_SOURCE}
 
-[macro]
-critical_distance = {{{{value = "0.32 arcsec", error = "0.12 arcsec"}}}}
-gradient = "0.045 / arcsec"
-mu_r = 1.9
+{{macro}}
 
 [[microlenses]]
 surface_density = {{{{value = "21 solMass / pc2", error = "6 solMass / pc2"}}}}
@@ -54,6 +53,11 @@ lens_spread = "420 km / s"
 source_spread = "230 km / s"
 position = ["151.2 deg", "-4.7 deg"]
 """
+
+MACRO = """[macro]
+critical_distance = {value = "0.32 arcsec", error = "0.12 arcsec"}
+gradient = "0.045 / arcsec"
+mu_r = 1.9"""
 
 
 @dataclass
@@ -118,10 +122,19 @@ def observe(rng, rows: Rows, time: float, band: str, flux: float) -> None:
 
 
 def write(
-    name: str, title: str, rows: Rows, truth: dict, *, file: str, photometry: str, bands: str = "short middle"
+    name: str,
+    title: str,
+    rows: Rows,
+    truth: dict,
+    *,
+    file: str,
+    photometry: str,
+    bands: str = "short middle",
+    macro: str = MACRO,
+    script: str = "make_demo.py",
 ) -> None:
     """Write the event file, its light curve and its truth."""
-    lines = [SCENE.format(name=name, title=title)]
+    lines = [SCENE.format(name=name, title=title, macro=macro, script=script)]
     for band in bands.split():
         wavelength, width, depth = BANDS[band]
         lines.append(

@@ -463,11 +463,11 @@ def test_bad_options(words: list[str], says: str, folder: Path, capsys: Captured
         (
             "[macro]\nkappa = 0.5\ngamma = 0.3\n",
             (
-                '[bands.red]\nwavelength = "1 um"\n[microlenses]\nsurface_brightness = "26 mag / arcsec2"\n',
+                '[bands.red]\nwavelength = "1 um"\n[microlenses]\nsurface_brightness = "15 mag / arcsec2"\n',
                 'band = "red"\nmass_to_light = "2 solMass / solLum"\n',
             ),
             [],
-            "microlenses: `surface_brightness` must wait for a later version",
+            "microlenses: must not hold more than the macro lens",
         ),
         ("[macro]\nkappa = 0.5\ngamma = 0.3\n", (), ["--pair"], "macro: must have a gradient along x"),
         ("[macro]\nkappa = 0.7\ngamma = 0.2999\n", (), ["--width", "1e6"], "event.toml: the window needs about"),

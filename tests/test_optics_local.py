@@ -243,7 +243,7 @@ class TestRecords:
         for call in (local_lenses, lambda e: sample_eigenvalues(e, np.random.default_rng(1), 100)):
             with pytest.raises(InputError, match=r"macro\.models\[1\]: `mu_t` must keep one sign, got -10 to 20; give"):
                 call(event(good, ranged))
-        with pytest.raises(InputError, match="`maps` must wait for a later version, which reads maps; give kappa and"):
+        with pytest.raises(InputError, match="`maps` must hold what it is made of, got numbers alone; read the event"):
             local_lenses(event({"way": "maps", "mu_r": exact(2.0)}))
 
 

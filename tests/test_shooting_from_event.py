@@ -13,6 +13,7 @@ from crossing.event import read_event
 from crossing.optics.scales import LensScales
 from crossing.shooting.from_event import LocalSetup, local_setup
 from crossing.shooting.maps.magnification_map import MagnificationMap
+from crossing.shooting.peaks.peak_lens import macro_choices
 
 HEAD = '[event]\nname = "knot"\n'
 REDSHIFTS = "[lens]\nredshift = 0.5\n[source]\nredshift = 1.5\n"
@@ -50,6 +51,23 @@ def test_the_smallest_event(event: Any) -> None:
     assert setup.populations[0].mass_function.name == "kroupa"
     assert (setup.parsec_per_einstein, setup.days_per_einstein, setup.gradient) == (None, None, None)
     assert setup.macro_change(5.0, 5.0) is None
+
+
+def test_surface_brightness_and_its_error_in_draws(event: Any) -> None:
+    """26 mag/arcsec2 at 1.25 um: Sun's 4.5 at 0.833 um, by hand; an error of 0.2 mag spreads draws by 20%."""
+    light = (
+        '[bands.red]\nwavelength = "1.25 um"\n[[microlenses]]\nband = "red"\nmass_to_light = "2 solMass / solLum"\n'
+        'surface_brightness = {value = "26 mag / arcsec2", error = "0.2 mag / arcsec2"}\n'
+    )
+    setup = event(REDSHIFTS, MACRO, light)
+    by_hand = 2 * 10 ** (-0.4 * (26 - 4.51 - 21.572)) * 1.5**3 / 2267.1361
+    assert setup.kappa_star == pytest.approx(by_hand, rel=0.01)  # the Sun's magnitude to 0.01
+    (choice,) = macro_choices(setup.event)
+    assert not choice.certain
+    drawn = np.log([draw.kappa_star for draw in choice.draws(200, 1)])
+    # Halton points fill the axis evenly; 200 of them leave a few per cent.
+    assert np.std(drawn) == pytest.approx(0.4 * np.log(10) * 0.2, rel=0.05)
+    assert np.mean(drawn) == pytest.approx(np.log(setup.kappa_star), abs=0.01)
 
 
 def test_surface_density_over_the_critical_one(event: Any) -> None:
@@ -166,7 +184,18 @@ def test_a_labelled_map_says_where_it_comes_from(event: Any) -> None:
                 'band = "red"\nmass_to_light = "2 solMass / solLum"\n',
             ),
             {},
-            r"microlenses\[1\]: `surface_brightness` must wait for a later version.*give kappa_star or surface_density",
+            "lens: must be given for surface_brightness; add",
+        ),
+        (
+            (
+                REDSHIFTS,
+                MACRO,
+                STARS,
+                '[bands.far]\nwavelength = "8 um"\n[[microlenses]]\nsurface_brightness = "26 mag / arcsec2"\n'
+                'band = "far"\nmass_to_light = "2 solMass / solLum"\n',
+            ),
+            {},
+            r"microlenses\[1\]: `rest_wavelength_um` must be 0.3 to 3.5, got",
         ),
         (
             (REDSHIFTS, MACRO, '[[microlenses]]\nsurface_density = "1700 solMass / pc2"\n'),

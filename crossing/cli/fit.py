@@ -50,7 +50,8 @@ def run(options: argparse.Namespace) -> int:
     folder.check(_FILES)
 
     from crossing.inference import fit_crossing
-    from crossing.report.fit import fit_figure, fit_text, table_bytes
+    from crossing.report.fit import fit_figure, fit_text
+    from crossing.report.tables import table_bytes
 
     result = fit_crossing(
         event,

@@ -21,8 +21,10 @@ DONE, FAULT, INVALID, FLAGGED, INTERRUPTED = 0, 1, 2, 3, 130
 _VERBS = {
     "fit": ("crossing.cli.fit", "fit a caustic crossing to a light curve: radius, temperature, luminosity"),
     "library": ("crossing.cli.library", "list, fill or remove the tracks that are kept on disk"),
+    "macro": ("crossing.cli.macro", "say what lens models tell at the event, and trace their critical curves"),
     "map": ("crossing.cli.map", "map the magnification of a random star field over the source plane"),
     "peak": ("crossing.cli.peak", "predict peak magnifications, their rates and durations"),
+    "rates": ("crossing.cli.rates", "predict how many lensed-star events a programme will see on an arc"),
     "track": ("crossing.cli.track", "simulate light curves of the event's star on random tracks"),
 }
 

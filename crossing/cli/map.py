@@ -175,8 +175,8 @@ def _deliver(
     options: argparse.Namespace, folder: OutputFolder, chart: MagnificationMap, network: CausticNetwork | None
 ) -> int:
     """Write the files and tell what is in them; returns the exit status."""
-    from crossing.report.fit import table_bytes
     from crossing.report.map import CAUTIONS, map_figure, map_text
+    from crossing.report.tables import table_bytes
     from crossing.shooting.caustics.network import FLAGS as CAUSTIC_FLAGS
     from crossing.shooting.maps.magnification_map import FLAGS
     from crossing.shooting.maps.map_files import write_hdus

@@ -83,8 +83,8 @@ def run(options: argparse.Namespace) -> int:
     folder = OutputFolder(out_folder(options, "peak"), "peak", overwrite=options.overwrite)
     folder.check(_FILES)
 
-    from crossing.report.fit import table_bytes
     from crossing.report.peak import peak_figure, peak_text
+    from crossing.report.tables import table_bytes
     from crossing.shooting.peaks.peak_forecast import MAGNIFICATIONS, forecast_peaks
 
     result = forecast_peaks(

@@ -188,7 +188,7 @@ def _deliver(options: argparse.Namespace, folder: OutputFolder, setup: LocalSetu
     """Simulate, write the files and tell what is in them; returns the exit status."""
     from crossing.photometry.simulated import FLAGS
     from crossing.progress import track as progress
-    from crossing.report.fit import table_bytes
+    from crossing.report.tables import table_bytes
     from crossing.report.track import crossings_table, realisations_table, track_text
     from crossing.stars.star_draws import star_prior_texts
 
@@ -225,7 +225,7 @@ def _paths(options: argparse.Namespace, folder: OutputFolder, number: int) -> di
 def _write_one(options: argparse.Namespace, files: OutputFiles, setup: LocalSetup, found: SimulatedEvent) -> None:
     """Event file, light curve, noiseless curve and, for the first ones, the figure."""
     from crossing.event.rewriting import rewritten_event
-    from crossing.report.fit import table_bytes
+    from crossing.report.tables import table_bytes
     from crossing.report.track import track_figure
     from crossing.shooting.tracks.random_track import map_widths, surroundings
 

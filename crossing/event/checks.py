@@ -10,7 +10,7 @@ from crossing.event.tables import Table
 from crossing.event.values import Value
 from crossing.event.wording import describe, listed, nearest, quoted_key
 
-__all__ = ["check_band_names", "check_kappa_star", "check_order"]
+__all__ = ["check_band", "check_band_names", "check_kappa_star", "check_order"]
 
 # Decimal numbers such as 0.1 + 0.2 may exceed their sum by rounding.
 _ROUNDING = 1e-12
@@ -66,12 +66,17 @@ def check_band_names(
     used = [(table.place("band"), lens.band) for table, lens in zip(places, microlenses, strict=True)]
     used.append(("counterpart.band", counterpart.band if counterpart is not None else None))
     for place, name in used:
-        if name is not None and name not in bands:
-            problem = f"must be a band of this file, got {describe(name)}; "
-            if bands:
-                problem += (
-                    f"the nearest is {describe(nearest(name, bands))} out of {listed(map(describe, bands), 'and')}"
-                )
-            else:
-                problem += f"add [bands.{quoted_key(name)}] with its wavelength"
-            raise InputError(problem, source=root.source, where=place)
+        if name is not None:
+            check_band(root, bands, name, place)
+
+
+def check_band(root: Table, bands: Mapping[str, BandRecord], name: str, place: str) -> None:
+    """Refuse the band `name`, written at `place`, if it is not described in ``[bands]``."""
+    if name in bands:
+        return
+    problem = f"must be a band of this file, got {describe(name)}; "
+    if bands:
+        problem += f"the nearest is {describe(nearest(name, bands))} out of {listed(map(describe, bands), 'and')}"
+    else:
+        problem += f"add [bands.{quoted_key(name)}] with its wavelength"
+    raise InputError(problem, source=root.source, where=place)

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from typing import Final, Literal, cast
 
 from crossing.errors import InputError
+from crossing.event.macro_ways import HALO_KEYS, read_halo, read_maps, read_pairs
 from crossing.event.parsers import (
     ANY,
     NONZERO,
@@ -12,22 +14,19 @@ from crossing.event.parsers import (
     POSITIVE,
     Parser,
     choice,
-    flag,
     number,
     pair,
     sky_position,
     text,
     uncertain,
 )
-from crossing.event.quantities import ANGLE, DIMENSIONLESS, DISPERSION, FOLD_STRENGTH, GRADIENT
-from crossing.event.records import MacroRecord
+from crossing.event.quantities import ANGLE, DIMENSIONLESS, FOLD_STRENGTH, GRADIENT
+from crossing.event.records import MacroRecord, Way
 from crossing.event.tables import Table
 from crossing.event.values import Value
 from crossing.event.wording import listed
 
 __all__ = ["read_macro", "read_macro_model"]
-
-Way = Literal["kappa+gamma", "mu_t+mu_r", "critical_distance", "caustic_distance"]
 
 # Keys that say which way is meant.
 _LEADS: Final[dict[str, tuple[str, ...]]] = {
@@ -36,7 +35,7 @@ _LEADS: Final[dict[str, tuple[str, ...]]] = {
     "critical_distance": ("critical_distance",),
     "caustic_distance": ("caustic_distance",),
     "maps": ("maps",),
-    "velocity_dispersion": ("velocity_dispersion",),
+    "velocity_dispersion": ("velocity_dispersion", "members"),
     "mirror_pairs": ("mirror_pairs",),
 }
 _NEEDS: Final[dict[str, tuple[str, ...]]] = {
@@ -45,34 +44,35 @@ _NEEDS: Final[dict[str, tuple[str, ...]]] = {
     "critical_distance": ("critical_distance", "gradient", "mu_r"),
     "caustic_distance": ("caustic_distance", "mu_r", "side"),
     "maps": ("maps", "position"),
-    "velocity_dispersion": ("velocity_dispersion", "centre", "position"),
+    "velocity_dispersion": ("centre", "position"),
     "mirror_pairs": ("mirror_pairs", "position"),
 }
 _MAY: Final[dict[str, tuple[str, ...]]] = {
     "kappa+gamma": ("gradient",),
     "mu_t+mu_r": ("gradient",),
     "caustic_distance": ("gradient", "fold_strength"),
+    "velocity_dispersion": HALO_KEYS,
+    "mirror_pairs": ("mu_r", "gradient", "side", "centre"),
 }
 _ALWAYS: Final = ("position", "position_error")
 _OF_ALTERNATIVES: Final = ("name", "weight")
 _KNOWN: Final = tuple(dict.fromkeys(key for keys in (*_NEEDS.values(), *_MAY.values(), _ALWAYS) for key in keys))
 _SERVING: Final = (
-    "kappa + gamma, mu_t + mu_r, critical_distance + gradient + mu_r, "
-    "or caustic_distance + (gradient or fold_strength) + mu_r + side"
+    "kappa + gamma, mu_t + mu_r, critical_distance + gradient + mu_r, caustic_distance + (gradient or fold_strength) "
+    "+ mu_r + side, or with position one of [[macro.maps]], velocity_dispersion + centre, and [[macro.mirror_pairs]]"
 )
-_MAP_TEXTS: Final = ("convergence", "shear1", "shear2", "shear", "deflection1", "deflection2", "deflection_unit")
 # An eigenvalue that is zero up to the rounding of decimal numbers such as 1 - 0.7 - 0.3.
 _ROUNDING: Final = 1e-12
 
 
 def read_macro(root: Table) -> tuple[MacroRecord, ...]:
-    """All macro models of the file: none, the one of ``[macro]``, or those of ``[[macro.models]]``."""
+    """All macro models of the file: none, those of ``[macro]``, or those of ``[[macro.models]]``."""
     table = root.table("macro")
     if table is None:
         return ()
     if "models" not in table:
         table.only(*_KNOWN, "models")
-        return (read_macro_model(table),)
+        return read_macro_model(table)
     for key in table:
         if key != "models" and key in _KNOWN:
             raise table.error("must not stand beside [[macro.models]]; move it into each of them", key)
@@ -80,11 +80,11 @@ def read_macro(root: Table) -> tuple[MacroRecord, ...]:
     models = table.tables("models")
     for model in models:
         model.only(*_KNOWN, *_OF_ALTERNATIVES)
-    return tuple(read_macro_model(model) for model in models)
+    return tuple(record for model in models for record in read_macro_model(model))
 
 
-def read_macro_model(table: Table) -> MacroRecord:
-    """One macro model, from a table whose keys are known to be spelt right.
+def read_macro_model(table: Table) -> tuple[MacroRecord, ...]:
+    """Macro models of a table whose keys are known to be spelt right: one, or one for each lens model with maps.
 
     Raises
     ------
@@ -92,8 +92,7 @@ def read_macro_model(table: Table) -> MacroRecord:
         If the model is not given in exactly one way, a key of that way is missing, or a number is impossible.
     """
     way = _way_of(table)
-    _refuse_maps(table, way)
-    distance_way = way in ("critical_distance", "caustic_distance")
+    distance_way = way in ("critical_distance", "caustic_distance", "mirror_pairs")
     model = MacroRecord(
         way=cast(Way, way),
         name=table.get("name", text),
@@ -110,11 +109,26 @@ def read_macro_model(table: Table) -> MacroRecord:
         side=cast(Literal["minimum", "saddle", "pair"] | None, table.get("side", choice("minimum", "saddle", "pair"))),
         position=table.get("position", sky_position),
         position_error=table.get("position_error", number(ANGLE, POSITIVE)),
+        centre=table.get("centre", sky_position),
+        halo=read_halo(table) if way == "velocity_dispersion" else None,
+        mirror_pairs=read_pairs(table) if way == "mirror_pairs" else (),
+        place=table.where,
     )
     if model.position_error is not None and model.position is None:
         raise table.error("must go with position; add the position or remove position_error", "position_error")
     _check_eigenvalues(table, model)
-    return model
+    return _each_map(table, model) if way == "maps" else (model,)
+
+
+def _each_map(table: Table, model: MacroRecord) -> tuple[MacroRecord, ...]:
+    """One alternative for each lens model that has maps; together they weigh as much as their common model."""
+    maps = read_maps(table)
+    total = sum(weight for _, weight in maps)
+    places = [inner.where for inner in table.tables("maps")]
+    return tuple(
+        replace(model, name=chart.name or model.name, weight=model.weight * weight / total, maps=(chart,), place=place)
+        for (chart, weight), place in zip(maps, places, strict=True)
+    )
 
 
 def _way_of(table: Table) -> str:
@@ -130,6 +144,10 @@ def _way_of(table: Table) -> str:
             raise table.error(f"must be given with {lead}; add it, or give {_SERVING}", key)
     if way == "caustic_distance":
         table.one_of("gradient", "fold_strength")
+    if way == "mirror_pairs" and isinstance(table.get("gradient", lambda raw: raw), list):
+        raise table.error(
+            "must be one number along the stretch beside mirror_pairs, got an array; give one", "gradient"
+        )
     allowed = (*_NEEDS[way], *_MAY.get(way, ()), *_ALWAYS, *_OF_ALTERNATIVES)
     for key in table:
         if key not in allowed:
@@ -161,27 +179,3 @@ def _check_eigenvalues(table: Table, model: MacroRecord) -> None:
         raise table.error("must not be 1 + gamma, where the radial magnification is infinite; change one", "kappa")
     if abs(lam_t) < _ROUNDING and model.gradient is None:
         raise table.error("must not be 1 - gamma, where the magnification is infinite; add a gradient", "kappa")
-
-
-def _refuse_maps(table: Table, way: str) -> None:
-    """Validate the ways that later versions will read, then say that this one does not."""
-    if way not in ("maps", "velocity_dispersion", "mirror_pairs"):
-        return
-    table.need("position", sky_position)
-    table.get("position_error", number(ANGLE, POSITIVE))
-    if way == "velocity_dispersion":
-        table.need("velocity_dispersion", uncertain(DISPERSION, POSITIVE))
-        table.need("centre", sky_position)
-    for inner in table.tables(way) if way != "velocity_dispersion" else ():
-        if way == "maps":
-            _check_map(inner)
-    raise table.error(f"is not read by this version yet; give {_SERVING} instead", way)
-
-
-def _check_map(table: Table) -> None:
-    table.only("name", *_MAP_TEXTS, "source_redshift", "normalised", "axes", "realisations")
-    for key in ("name", *_MAP_TEXTS, "realisations"):
-        table.get(key, text)
-    table.get("source_redshift", number(DIMENSIONLESS, POSITIVE))
-    table.get("normalised", flag)
-    table.get("axes", choice("pixel", "sky"))

@@ -15,7 +15,7 @@ from typing import Final, TypeVar
 from astropy.units import UnitsError
 
 from crossing.errors import InputError
-from crossing.event.quantities import DIMENSIONLESS, Measure
+from crossing.event.quantities import DIMENSIONLESS, EXTINCTION, Measure
 from crossing.event.values import Value
 from crossing.event.wording import check_keys, describe, listed, nearest
 
@@ -27,10 +27,12 @@ __all__ = [
     "POSITIVE",
     "Bounds",
     "Parser",
+    "array",
     "choice",
     "epochs",
     "flag",
     "is_name",
+    "mjd",
     "number",
     "pair",
     "sky_position",
@@ -42,6 +44,7 @@ T = TypeVar("T")
 Parser = Callable[[object], T]
 
 _MJD_LAST = 1e6
+_PER_MAGNITUDE = 0.4 * math.log(10)  # relative change of a flux, for small errors
 _LONGEST_NAME = 64
 
 
@@ -100,7 +103,11 @@ def number(measure: Measure = DIMENSIONLESS, bounds: Bounds = ANY) -> Parser[flo
 
 
 def uncertain(measure: Measure = DIMENSIONLESS, bounds: Bounds = ANY) -> Parser[Value]:
-    """Return a parser of a bare value, {value, error} or {low, high, scale}, in the unit of `measure`."""
+    """Return a parser of a bare value, {value, error} or {low, high, scale}, in the unit of `measure`.
+
+    Where fluxes may be magnitudes, an error in magnitudes is a relative one, and a range of magnitudes, in either
+    order, is flat in them.
+    """
 
     def parse(raw: object) -> Value:
         if not isinstance(raw, dict):
@@ -129,7 +136,10 @@ def _normal(raw: dict[str, object], measure: Measure, bounds: Bounds) -> Value:
             f"must not mix {stray[0]} with value and error; write {{value, error}} or {{low, high, scale}}"
         )
     value = _part(raw, "value", number(measure, bounds))
-    error = _part(raw, "error", number(measure, POSITIVE))
+    if measure.is_magnitude(raw.get("error")):
+        error = abs(value) * _PER_MAGNITUDE * _part(raw, "error", number(EXTINCTION, POSITIVE))
+    else:
+        error = _part(raw, "error", number(measure, POSITIVE))
     low, high = bounds.around(value)
     return Value.normal(value, error, lower=low, upper=high)
 
@@ -143,6 +153,10 @@ def _range(raw: dict[str, object], measure: Measure, bounds: Bounds) -> Value:
     low = _part(raw, "low", end)
     high = _part(raw, "high", end)
     scale = _part(raw, "scale", choice("linear", "log")) if "scale" in raw else "linear"
+    if measure.is_magnitude(raw["low"]) and measure.is_magnitude(raw["high"]):
+        if scale == "log":
+            raise InputError("scale must not go with magnitudes, which are logarithms already; remove it")
+        low, high, scale = min(low, high), max(low, high), "log"
     value = Value.loguniform(low, high) if scale == "log" else Value.uniform(low, high)
     if bounds.nonzero and low < 0 < high:
         raise InputError(f"must stay on one side of 0, got {value}; cut the range there")
@@ -210,8 +224,9 @@ def _item(items: list[object], index: int, read: Parser[T]) -> T:
     try:
         return read(items[index])
     except InputError as error:
-        inner = f".{error.where}" if error.where else ""
-        raise InputError(error.problem, where=f"[{index}]{inner}") from None
+        inner = error.where or ""
+        dot = "." if inner and not inner.startswith("[") else ""
+        raise InputError(error.problem, where=f"[{index}]{dot}{inner}") from None
 
 
 def pair(first: Parser[T], second: Parser[T], what: str) -> Parser[tuple[T, T]]:
@@ -224,6 +239,16 @@ def pair(first: Parser[T], second: Parser[T], what: str) -> Parser[tuple[T, T]]:
     return parse
 
 
+def array(read: Parser[T], what: str) -> Parser[tuple[T, ...]]:
+    """Return a parser of a non-empty array of entries for `read`; `what` describes the array."""
+
+    def parse(raw: object) -> tuple[T, ...]:
+        items = _items(raw, what)
+        return tuple(_item(items, index, read) for index in range(len(items)))
+
+    return parse
+
+
 def epochs(raw: object) -> tuple[float, ...]:
     """Non-empty array of MJDs [days].
 
@@ -232,16 +257,22 @@ def epochs(raw: object) -> tuple[float, ...]:
     InputError
         If `raw` is no array, or an entry is no plausible MJD.
     """
-    items = _items(raw, "of at least one MJD")
-    return tuple(_item(items, index, _mjd) for index in range(len(items)))
+    return array(mjd, "of at least one MJD")(raw)
 
 
-def _mjd(raw: object) -> float:
-    mjd = DIMENSIONLESS.read(raw)
-    if not 0 <= mjd <= _MJD_LAST:
-        hint = "; subtract 2400000.5 from a JD" if mjd > _MJD_LAST else ""
+def mjd(raw: object) -> float:
+    """MJD [days].
+
+    Raises
+    ------
+    InputError
+        If `raw` is no plausible MJD.
+    """
+    days = DIMENSIONLESS.read(raw)
+    if not 0 <= days <= _MJD_LAST:
+        hint = "; subtract 2400000.5 from a JD" if days > _MJD_LAST else ""
         raise InputError(f"must be an MJD between 0 and 1e6, got {describe(raw)}{hint}")
-    return mjd
+    return days
 
 
 def sky_position(raw: object) -> tuple[float, float]:

@@ -20,6 +20,8 @@ __all__ = [
     "DEGREES",
     "DIMENSIONLESS",
     "DISPERSION",
+    "DURATION",
+    "EXPOSURE",
     "EXTINCTION",
     "FLUX",
     "FOLD_STRENGTH",
@@ -29,6 +31,7 @@ __all__ = [
     "MASS",
     "MASS_TO_LIGHT",
     "RADIUS",
+    "STAR_FORMATION_DENSITY",
     "SURFACE_BRIGHTNESS",
     "SURFACE_DENSITY",
     "TEMPERATURE",
@@ -78,6 +81,11 @@ class Measure:
             hint = "; remove the quotes" if isinstance(raw, str) else ""
             raise InputError(f"must be a plain number such as {self.example}, got {describe(raw)}{hint}")
         raise self._refusal(raw)
+
+    def is_magnitude(self, raw: object) -> bool:
+        """Whether `raw` is written in magnitudes and the measure takes them."""
+        match = _QUANTITY.fullmatch(raw.strip()) if self.ab and isinstance(raw, str) and len(raw) <= _LONGEST else None
+        return match is not None and _unit(match[2]) in (u.mag, u.ABmag)
 
     def _refusal(self, raw: object) -> InputError:
         kinds = f"{self.unit} or AB mag" if self.ab else self.unit
@@ -143,6 +151,9 @@ MASS: Final = Measure(unit="solMass", example="0.3 solMass")
 RADIUS: Final = Measure(unit="solRad", example="200 solRad")
 TEMPERATURE: Final = Measure(unit="K", example="12000 K")
 LUMINOSITY: Final = Measure(unit="solLum", example="1e5 solLum")
+DURATION: Final = Measure(unit="d", example="2 d")
+EXPOSURE: Final = Measure(unit="h", example="1.5 h")
+STAR_FORMATION_DENSITY: Final = Measure(unit="solMass / (yr kpc2)", example="0.1 solMass / (yr kpc2)")
 WAVELENGTH: Final = Measure(unit="um", example="1.15 um")
 FLUX: Final = Measure(unit="nJy", example="28.4 mag", ab=True)
 EXTINCTION: Final = Measure(unit="mag", example="0.12 mag")

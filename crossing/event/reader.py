@@ -27,7 +27,7 @@ _SECTIONS: Final = (
     *("event", "lens", "source", "cosmology", "macro", "microlenses", "motion", "star"),
     *("bands", "photometry", "counterpart"),
 )
-_CAMPAIGN_SECTIONS: Final = ("campaign", "segments", "population", "schedules", "detection", "observed")
+_CAMPAIGN_SECTIONS: Final = ("campaign", "segments", "line", "population", "schedules", "detection", "observed")
 _REMEDIES: Final = {
     "lens": ("lens_redshift", "add [lens] with redshift = ..."),
     "source": ("source_redshift", "add [source] with redshift = ..."),

@@ -15,12 +15,18 @@ __all__ = [
     "CosmologyRecord",
     "CounterpartRecord",
     "Event",
+    "HaloRecord",
     "MacroRecord",
+    "MapRecord",
+    "MassRelation",
+    "MembersRecord",
     "MicrolensRecord",
     "MotionRecord",
+    "PairRecord",
     "PhotometryRecord",
     "Position",
     "StarRecord",
+    "Way",
 ]
 
 DEFAULT_SIGMA: Final = 5.0
@@ -29,6 +35,18 @@ DEFAULT_MASS_RANGE: Final = (0.08, 1.5)
 """Masses [Msun] of the stars that still shine in an old population (common practice)."""
 Position = tuple[float, float]
 """Right ascension and declination [deg]."""
+MassRelation = Literal["evrard 2008", "munari 2013", "carlberg 1997", "isothermal"]
+"""Named relations between the mass of a cluster and the velocity dispersion of its members."""
+Way = Literal[
+    "kappa+gamma",
+    "mu_t+mu_r",
+    "critical_distance",
+    "caustic_distance",
+    "maps",
+    "velocity_dispersion",
+    "mirror_pairs",
+]
+"""Ways of giving the macro lens."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -44,10 +62,87 @@ class CosmologyRecord:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class MapRecord:
+    """Maps of one lens model; none of the files is opened yet."""
+
+    planes: dict[str, str]
+    """Names of files, with an optional plane of the file in brackets, by key: ``convergence``, ``shear1``, ``shear2``,
+    ``shear`` (its size), ``deflection1``, ``deflection2``."""
+    name: str | None = None
+    """Name of the lens model."""
+    deflection_unit: str | None = None
+    """Unit of the deflections: an angle or ``pixel``; None: what the files say."""
+    source_redshift: float | None = None
+    """Redshift of the sources that the maps hold for; None where `normalised`."""
+    normalised: bool = False
+    """Whether they hold for D_ls/D_s = 1."""
+    axes: Literal["pixel", "sky"] = "pixel"
+    """Axes of the components of shear and deflection: those of the pixels, or east and north."""
+    realisations: str | None = None
+    """Names of further realisations of the model, with wildcards."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class PairRecord:
+    """Two images of one knot, mirrored across the critical curve."""
+
+    first: Position
+    """Position of one image [deg]."""
+    second: Position
+    """Position of the other image [deg]."""
+    name: str | None = None
+    """Name of the knot."""
+    position_error: float | None = None
+    """Standard deviation of each coordinate of both positions [arcsec]."""
+    flux1: Value | None = None
+    """Flux of the first image [nJy]."""
+    flux2: Value | None = None
+    """Flux of the second image [nJy]."""
+    magnification: Value | None = None
+    """Unsigned magnification of either image, the geometric mean of both."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class MembersRecord:
+    """A table of line-of-sight velocities of a cluster's members; not yet opened."""
+
+    path: Path
+    """The table."""
+    columns: dict[str, str] = field(default_factory=dict)
+    """Names of its columns, for those that differ from ``velocity``, ``velocity_err`` and ``redshift``."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class HaloRecord:
+    """Mass of a cluster from the motion of its members; its dispersion or their table is given."""
+
+    dispersion: Value | None = None
+    """Velocity dispersion along the line of sight [km/s]."""
+    members: MembersRecord | None = None
+    """Members whose dispersion is to be taken."""
+    profile: Literal["isothermal", "nfw"] = "isothermal"
+    """Shape of the mass."""
+    axis_ratio: Value | None = None
+    """Minor over major axis of the isothermal ellipsoid; None: round."""
+    core: Value | None = None
+    """Core radius of the isothermal ellipsoid [arcsec]."""
+    angle: Value | None = None
+    """Position angle of its major axis, from north to east [deg]."""
+    shear: Value | None = None
+    """Size of an external shear, for the event's source."""
+    shear_angle: Value | None = None
+    """Position angle of the direction in which that shear stretches images, from north to east [deg]."""
+    concentration: Value | None = None
+    """r200c / r_s of the NFW sphere."""
+    mass_relation: MassRelation | None = None
+    """Relation that gives the mass of the NFW sphere; None: its default."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class MacroRecord:
     """One way of giving the macro lens at the event; what the way does not use is None."""
 
-    way: Literal["kappa+gamma", "mu_t+mu_r", "critical_distance", "caustic_distance"]
+    way: Way
     """Which of the fields are given."""
     name: str | None = None
     """Name of the lens model, where there are several."""
@@ -70,11 +165,21 @@ class MacroRecord:
     caustic_distance: Value | None = None
     """Distance of the source to the macro caustic, inside it [arcsec]."""
     side: Literal["minimum", "saddle", "pair"] | None = None
-    """Which image of the merging pair is meant, with `caustic_distance`."""
+    """Which image of the merging pair is meant, with `caustic_distance` or `mirror_pairs`."""
     position: Position | None = None
     """Position of the event [deg]."""
     position_error: float | None = None
     """Standard deviation of each coordinate of the position [arcsec]."""
+    centre: Position | None = None
+    """Centre of the cluster [deg]."""
+    maps: tuple[MapRecord, ...] = ()
+    """The maps: one lens model, since several become as many alternatives."""
+    halo: HaloRecord | None = None
+    """The cluster's mass, with `velocity_dispersion`."""
+    mirror_pairs: tuple[PairRecord, ...] = ()
+    """Mirrored knots, two or more."""
+    place: str | None = field(default=None, compare=False)
+    """Key of the file that holds it, for messages."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -18,7 +18,7 @@ _BARE_KEY: Final = re.compile(r"[A-Za-z0-9_-]+")
 # A quantity with its uncertainty stays on one line.
 _VALUE_KEYS: Final = frozenset({"value", "error", "low", "high", "scale"})
 # Paths that a macro model may hold; relative ones start from the folder of the file they stand in.
-_PATH_KEYS: Final = ("convergence", "shear1", "shear2", "shear", "deflection1", "deflection2", "realisations")
+_PATH_KEYS: Final = ("file", "convergence", "shear1", "shear2", "shear", "deflection1", "deflection2", "realisations")
 
 
 def rewritten_event(path: Path, *, suffix: str, photometry: Mapping[str, Any], comment: Iterable[str] = ()) -> str:
@@ -64,9 +64,10 @@ def _rebased(macro: Mapping[str, Any], folder: Path) -> dict[str, Any]:
     """A macro model whose paths no longer depend on where the file stands."""
     out: dict[str, Any] = {}
     for key, value in macro.items():
-        if key in ("maps", "models") and isinstance(value, (dict, list)):
+        if key in ("maps", "models", "members") and isinstance(value, (dict, list)):
             tables = value if isinstance(value, list) else [value]
-            out[key] = [_rebased(table, folder) if isinstance(table, dict) else table for table in tables]
+            rebased = [_rebased(table, folder) if isinstance(table, dict) else table for table in tables]
+            out[key] = rebased if isinstance(value, list) else rebased[0]
         else:
             out[key] = str(folder / value) if key in _PATH_KEYS and isinstance(value, str) else value
     return out

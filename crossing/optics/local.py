@@ -14,7 +14,8 @@ from crossing.optics.fold import profile_peak
 from crossing.optics.scales import LensScales
 
 if TYPE_CHECKING:
-    from crossing.event import Event, MacroRecord, Value
+    from crossing.event import Event
+    from crossing.optics.macro.state import LocalState
 
 __all__ = ["EigenvalueDraws", "FoldGeometry", "LocalLens", "LocalModel", "local_lenses", "sample_eigenvalues"]
 
@@ -227,17 +228,18 @@ def local_lenses(event: Event) -> tuple[LocalModel, ...]:
     InputError
         If a record cannot be turned into a lens; the message names the key.
     """
+    # The ways of giving a macro lens build on what stands above.
+    from crossing.optics.macro.solutions import located, resolve
+
     theta_E = None
     if event.lens_redshift is not None and event.source_redshift is not None:
         scales = LensScales(event.lens_redshift.central, event.source_redshift.central, event.cosmology)
         theta_E = scales.einstein_radius_arcsec
     total = sum(record.weight for record in event.macro)
     models = []
-    for index, record in enumerate(event.macro):
-        try:
-            models.append(_central_model(record, record.weight / total, theta_E))
-        except InputError as error:
-            raise error.located(source=event.path, where=_key(event, index)) from None
+    for index, solution in enumerate(resolve(event)):
+        with located(event, index):
+            models.append(_central_model(solution.central, event.macro[index].weight / total, theta_E))
     return tuple(models)
 
 
@@ -268,108 +270,26 @@ def sample_eigenvalues(event: Event, rng: np.random.Generator, size: int) -> Eig
     The spread is carried in the eigenvalues. A normal error of a magnification becomes a normal one of its inverse, so
     that a lens model close to the critical curve spreads over both of its sides.
     """
+    from crossing.optics.macro.solutions import located, resolve
+
     if not event.macro:
         raise InputError("must be given for this; add kappa and gamma, or another of its ways", where="macro")
     weights = np.array([record.weight for record in event.macro])
     model = rng.choice(len(weights), size=size, p=weights / weights.sum())
     lam_t, lam_r = np.empty(size), np.empty(size)
-    for index, record in enumerate(event.macro):
+    for index, solution in enumerate(resolve(event)):
         chosen = model == index
-        try:
-            lam_t[chosen], lam_r[chosen] = _draw(record, rng, int(chosen.sum()))
-        except InputError as error:
-            raise error.located(source=event.path, where=_key(event, index)) from None
+        with located(event, index):
+            lam_t[chosen], lam_r[chosen] = solution.draw(rng, int(chosen.sum()))
     return EigenvalueDraws(lam_t, lam_r, model)
 
 
-def _key(event: Event, index: int) -> str:
-    return "macro" if len(event.macro) == 1 else f"macro.models[{index}]"
-
-
-def _need(value: Value | None, key: str) -> Value:
-    if value is None:
-        raise InputError(f"`{key}` must be given for this way of saying the macro lens; add it")
-    return value
-
-
-def _central_model(record: MacroRecord, weight: float, theta_E: float | None) -> LocalModel:
-    lam_t, lam_r = _central_eigenvalues(record)
-    gradient = _central_gradient(record, lam_r)
+def _central_model(state: LocalState, weight: float, theta_E: float | None) -> LocalModel:
+    lam_t, lam_r, gradient = state.lam_t, state.lam_r, state.gradient
     if gradient is None:
         return LocalModel(weight, LocalLens.from_eigenvalues(lam_t, lam_r), None)
     per_theta_E = None if theta_E is None else (gradient[0] * theta_E, gradient[1] * theta_E)
     lens = LocalLens.from_eigenvalues(lam_t, lam_r, per_theta_E)
     if gradient[0] == 0 or lam_r == 0:
         return LocalModel(weight, lens, None)
-    images: Literal[1, 2] = 2 if record.side == "pair" else 1
-    return LocalModel(weight, lens, FoldGeometry(gradient=gradient, mu_r=1 / lam_r, images=images))
-
-
-def _central_gradient(record: MacroRecord, lam_r: float) -> tuple[float, float] | None:
-    if record.gradient is not None:
-        return record.gradient[0].central, record.gradient[1].central
-    if record.fold_strength is not None:
-        return 2 / (record.fold_strength.central * lam_r) ** 2, 0.0
-    return None
-
-
-def _central_eigenvalues(record: MacroRecord) -> tuple[float, float]:
-    if record.way == "kappa+gamma":
-        kappa, gamma = _need(record.kappa, "kappa").central, _need(record.gamma, "gamma").central
-        return 1 - kappa - gamma, 1 - kappa + gamma
-    lam_r = 1 / _magnification(record.mu_r, "mu_r").central
-    if record.way == "mu_t+mu_r":
-        return 1 / _magnification(record.mu_t, "mu_t").central, lam_r
-    if record.way == "critical_distance":
-        gradient = _need(record.gradient[0] if record.gradient else None, "gradient")
-        return gradient.central * _need(record.critical_distance, "critical_distance").central, lam_r
-    if record.way == "caustic_distance":
-        gradient_x = (_central_gradient(record, lam_r) or (_need(None, "gradient").central,))[0]
-        distance = _need(record.caustic_distance, "caustic_distance").central
-        return _side_sign(record, lam_r) * sqrt(2 * abs(gradient_x) * distance), lam_r
-    raise InputError(f"`{record.way}` must wait for a later version, which reads maps; give kappa and gamma instead")
-
-
-def _draw(record: MacroRecord, rng: np.random.Generator, size: int) -> tuple[Array, Array]:
-    if record.way == "kappa+gamma":
-        kappa = _need(record.kappa, "kappa").sample(rng, size)
-        gamma = _need(record.gamma, "gamma").sample(rng, size)
-        return 1 - kappa - gamma, 1 - kappa + gamma
-    lam_r = _inverse_draws(_magnification(record.mu_r, "mu_r"), rng, size)
-    if record.way == "mu_t+mu_r":
-        return _inverse_draws(_magnification(record.mu_t, "mu_t"), rng, size), lam_r
-    if record.gradient is not None:
-        gradient = record.gradient[0].sample(rng, size)
-    elif record.way == "caustic_distance":
-        gradient = 2 / (_need(record.fold_strength, "fold_strength").sample(rng, size) * lam_r) ** 2
-    else:
-        gradient = _need(None, "gradient").sample(rng, size)
-    if record.way == "critical_distance":
-        return gradient * _need(record.critical_distance, "critical_distance").sample(rng, size), lam_r
-    distance = _need(record.caustic_distance, "caustic_distance").sample(rng, size)
-    sign = _side_sign(record, _central_eigenvalues(record)[1])
-    return sign * np.sqrt(2 * np.abs(gradient) * np.maximum(distance, 0.0)), lam_r
-
-
-def _magnification(value: Value | None, key: str) -> Value:
-    """Return the value of a magnification, none of whose central or range values may be zero."""
-    given = _need(value, key)
-    ranged = given.shape in ("uniform", "loguniform")
-    if given.central == 0 or (ranged and given.a * given.b <= 0):
-        raise InputError(f"`{key}` must keep one sign, got {given}; give the distance to the critical curve instead")
-    return given
-
-
-def _inverse_draws(value: Value, rng: np.random.Generator, size: int) -> Array:
-    if value.shape != "normal":
-        return np.asarray(1 / value.sample(rng, size))
-    return np.asarray(1 / value.a + value.b / value.a**2 * rng.standard_normal(size))
-
-
-def _side_sign(record: MacroRecord, lam_r: float) -> int:
-    """Sign of lam_t at the image that `side` names."""
-    if lam_r > 0:
-        return -1 if record.side == "saddle" else 1
-    if record.side == "minimum":
-        raise InputError(f"`side` must be saddle or pair where mu_r is negative, got minimum with mu_r = {1 / lam_r:g}")
-    return 1
+    return LocalModel(weight, lens, FoldGeometry(gradient=gradient, mu_r=1 / lam_r, images=state.images))

@@ -2,20 +2,18 @@
 
 from __future__ import annotations
 
-import io
 from typing import TYPE_CHECKING
 
 from crossing.inference.figure import STYLES, plot_light_curve
 from crossing.inference.result import CAUTIONS, QUANTITIES
 
 if TYPE_CHECKING:
-    from astropy.table import QTable
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
     from crossing.inference.result import CrossingFit
 
-__all__ = ["fit_figure", "fit_text", "table_bytes"]
+__all__ = ["fit_figure", "fit_text"]
 
 _RESOLVED = 0.4
 
@@ -108,10 +106,3 @@ def fit_text(fit: CrossingFit) -> str:
     lines.append("  cautions:")
     lines += [f"    {text}" for text in CAUTIONS]
     return "\n".join(lines)
-
-
-def table_bytes(table: QTable) -> bytes:
-    """A table as ECSV."""
-    buffer = io.StringIO()
-    table.write(buffer, format="ascii.ecsv")
-    return buffer.getvalue().encode()

@@ -8,11 +8,12 @@ from typing import TYPE_CHECKING, Any, Final
 import numpy as np
 
 from crossing.errors import InputError
-from crossing.event import Event, MicrolensRecord, require
+from crossing.event import Event, require
 from crossing.optics.local import LocalLens, LocalModel, local_lenses
 from crossing.optics.motion import sample_effective_velocity
 from crossing.optics.scales import LensScales
 from crossing.shooting.field import StarField
+from crossing.stars.intracluster import StellarConvergence, stellar_convergence
 from crossing.stars.mass_functions import Population, from_record
 
 if TYPE_CHECKING:
@@ -42,6 +43,8 @@ class LocalSetup:
     """Change of lam_t per unit x and y, where it is known, whether it is kept or not [1/theta_E]."""
     populations: tuple[Population, ...]
     """Point masses."""
+    densities: tuple[StellarConvergence, ...]
+    """Their convergences with errors, in the same order."""
     parsec_per_einstein: float | None
     """Einstein radius in the source plane [pc], where redshifts are known."""
     days_per_einstein: float | None
@@ -144,13 +147,15 @@ def local_setup(event: Event, *, model: int | None = None, pair: bool | None = N
         )
     scales = _scales(event)
     lens, gradient = _macro_lens(event, model, models[model], pair)
+    densities = _densities(event, scales)
     return LocalSetup(
         event=event,
         model=model,
         name=event.macro[model].name,
         lens=lens,
         gradient=gradient,
-        populations=_populations(event, lens.kappa, scales),
+        populations=_populations(event, lens.kappa, densities),
+        densities=densities,
         parsec_per_einstein=None if scales is None else scales.einstein_radius_source_au / _AU_PER_PARSEC,
         days_per_einstein=_days_per_einstein(event, scales),
     )
@@ -180,14 +185,27 @@ def _macro_lens(
     return LocalLens(model.lens.kappa, model.lens.gamma, gradient if pair else None), gradient
 
 
-def _populations(event: Event, kappa: float, scales: LensScales | None) -> tuple[Population, ...]:
+def _densities(event: Event, scales: LensScales | None) -> tuple[StellarConvergence, ...]:
     found = []
     for index, record in enumerate(event.microlenses):
-        where = "microlenses" if len(event.microlenses) == 1 else f"microlenses[{index}]"
+        if record.kappa_star is None and scales is None:
+            require(
+                event, "lens", "source", purpose="surface_brightness" if record.band is not None else "surface_density"
+            )
         try:
-            found.append(Population(_kappa_star(event, record, scales), from_record(record)))
+            found.append(stellar_convergence(record, scales, event.bands))
         except InputError as error:
-            raise error.located(source=event.path, where=where) from None
+            raise error.located(source=event.path, where=_place(event, index)) from None
+    return tuple(found)
+
+
+def _populations(event: Event, kappa: float, densities: tuple[StellarConvergence, ...]) -> tuple[Population, ...]:
+    found = []
+    for index, (record, density) in enumerate(zip(event.microlenses, densities, strict=True)):
+        try:
+            found.append(Population(density.central, from_record(record)))
+        except InputError as error:
+            raise error.located(source=event.path, where=_place(event, index)) from None
     total = sum(part.kappa_star for part in found)
     if total > kappa * (1.0 + _ROUNDING):
         raise InputError(
@@ -198,18 +216,8 @@ def _populations(event: Event, kappa: float, scales: LensScales | None) -> tuple
     return tuple(found)
 
 
-def _kappa_star(event: Event, record: MicrolensRecord, scales: LensScales | None) -> float:
-    if record.kappa_star is not None:
-        return record.kappa_star.central
-    if record.surface_density is not None:
-        if scales is None:
-            require(event, "lens", "source", purpose="surface_density")
-            raise InputError("`surface_density` needs the redshifts of lens and source; add them")
-        return record.surface_density.central / scales.sigma_crit
-    raise InputError(
-        "`surface_brightness` must wait for a later version, which knows stellar light; give kappa_star or "
-        "surface_density"
-    )
+def _place(event: Event, index: int) -> str:
+    return "microlenses" if len(event.microlenses) == 1 else f"microlenses[{index}]"
 
 
 def _days_per_einstein(event: Event, scales: LensScales | None) -> float | None:

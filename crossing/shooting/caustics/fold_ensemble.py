@@ -8,7 +8,7 @@ that one set of draws serves every place on an arc.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import lru_cache
 from typing import TYPE_CHECKING, Any, Final, NamedTuple
 
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from astropy.table import QTable
     from matplotlib.axes import Axes
 
-__all__ = ["FoldEnsemble", "fold_ensemble"]
+__all__ = ["FoldEnsemble", "fold_ensemble", "fold_width"]
 
 Array = NDArray[np.float64]
 
@@ -169,11 +169,8 @@ class FoldEnsemble:
         above = np.atleast_1d(np.asarray(magnification, dtype=np.float64)) - beside
         if not np.all(above > 0):
             raise InputError(f"`magnification` must exceed the background {beside:.4g}, got {np.min(above) + beside:g}")
-        level, width = _widths(limb_darkening)
         needed = above[:, None] * np.sqrt(radius) / self.strength
-        found = np.interp(needed, level, width, right=0.0)
-        found = np.where(needed < level[0], 1.0 / np.maximum(needed, 1e-300) ** 2, found)
-        out = (found * radius) @ self.length
+        out = (fold_width(needed, limb_darkening) * radius) @ self.length
         return np.asarray(out.reshape(np.shape(magnification)))
 
     def to_dict(self) -> dict[str, Any]:
@@ -256,7 +253,9 @@ def fold_ensemble(
         raise InputError(f"`populations` must not exceed kappa = {lens.kappa:g}, got {kappa_star:g}; lower one of them")
     if k == 0 or min(abs(lens.lam_t), abs(lens.lam_r)) < _ROUNDING:
         raise InputError("`lens` must have a finite magnification and a smooth part below 1; move it off the curve")
-    others = _others(tuple(populations), draws, seed)
+    # Only the shares of the populations matter to them, so that an uncertain density draws them once.
+    shares = tuple(replace(part, kappa_star=round(part.kappa_star / kappa_star, 12)) for part in populations)
+    others = _others(shares, draws, seed)
     # Of the circle the part that is closest to no shear counts most.
     middle = 0.0 if gamma / k >= 0 else np.pi
     width = min(1.0, (abs(abs(k) - abs(gamma)) + kappa_star) / (2 * abs(k)))
@@ -321,6 +320,27 @@ def _masses(populations: tuple[Population, ...], shape: tuple[int, int], rng: np
         total = np.concatenate([[0.0], np.cumsum(steps)])
         out[chosen] = np.exp(np.interp(rng.random(int(chosen.sum())), total / total[-1], np.log(grid)))
     return out
+
+
+def fold_width(level: ArrayLike, limb_darkening: float = 0.0) -> Array:
+    """Width over which the profile of a fold exceeds a level.
+
+    Parameters
+    ----------
+    level : array_like
+        Levels of J, positive: needed magnification above the background times sqrt(R) / K.
+    limb_darkening : float
+        Linear coefficient.
+
+    Returns
+    -------
+    ndarray
+        Widths in radii of the disc, of the shape of `level`; 0 above the peak.
+    """
+    asked = np.asarray(level, dtype=np.float64)
+    known, width = _widths(limb_darkening)
+    found = np.interp(asked, known, width, right=0.0)
+    return np.where(asked < known[0], 1.0 / np.maximum(asked, 1e-300) ** 2, found)
 
 
 @lru_cache(maxsize=64)

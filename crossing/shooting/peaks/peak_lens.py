@@ -9,10 +9,12 @@ import numpy as np
 from numpy.typing import NDArray
 
 from crossing.optics.local import FoldGeometry, LocalLens, local_lenses, sample_eigenvalues
+from crossing.optics.macro.solutions import resolve
 from crossing.shooting.from_event import local_setup
 
 if TYPE_CHECKING:
-    from crossing.event import Event, MicrolensRecord, Value
+    from crossing.event import Event
+    from crossing.stars.intracluster import StellarConvergence
     from crossing.stars.mass_functions import Population
 
 __all__ = ["LensDraw", "MacroChoice", "macro_choices", "typical_mass"]
@@ -82,6 +84,8 @@ class MacroChoice:
     """The smooth fold, where the gradient is known."""
     populations: tuple[Population, ...]
     """Point masses; empty where the file has none."""
+    densities: tuple[StellarConvergence, ...]
+    """Their convergences with errors, in the same order."""
 
     @property
     def kappa_star(self) -> float:
@@ -91,13 +95,8 @@ class MacroChoice:
     @property
     def certain(self) -> bool:
         """Whether all draws have the same eigenvalues and stars."""
-        record = self.event.macro[self.index]
-        pair = record.gradient or ()
-        values = (
-            *(record.kappa, record.gamma, record.mu_t, record.mu_r, record.critical_distance, record.caustic_distance),
-            *(record.fold_strength, *pair, *(_density(stars) for stars in self.event.microlenses)),
-        )
-        return all(value is None or value.is_exact for value in values)
+        exact = all(density.is_exact for density in self.densities)
+        return exact and resolve(self.event)[self.index].certain
 
     def draws(self, count: int, seed: int) -> tuple[LensDraw, ...]:
         """Possible lenses, spread evenly over what is uncertain.
@@ -155,19 +154,14 @@ class MacroChoice:
 
     def _stars(self, shares: Array, kappa: float) -> tuple[Population, ...]:
         found = []
-        for part, record, share in zip(self.populations, self.event.microlenses, shares, strict=True):
-            value = _density(record)
-            ratio = 1.0 if value is None or value.is_exact else float(value.quantile(share)) / value.central
+        for part, density, share in zip(self.populations, self.densities, shares, strict=True):
+            ratio = float(density.quantile(share)) / density.central
             found.append(replace(part, kappa_star=part.kappa_star * max(ratio, _LEAST_DENSITY)))
         total = sum(part.kappa_star for part in found)
         if total > _ALL_STARS * kappa and total > self.kappa_star:
             shrink = max(_ALL_STARS * kappa, self.kappa_star) / total
             found = [replace(part, kappa_star=part.kappa_star * shrink) for part in found]
         return tuple(found)
-
-
-def _density(record: MicrolensRecord) -> Value | None:
-    return record.kappa_star if record.kappa_star is not None else record.surface_density
 
 
 def macro_choices(event: Event) -> tuple[MacroChoice, ...]:
@@ -196,6 +190,7 @@ def macro_choices(event: Event) -> tuple[MacroChoice, ...]:
                 lens=lens,
                 fold=model.fold,
                 populations=() if setup is None else setup.populations,
+                densities=() if setup is None else setup.densities,
             )
         )
     return tuple(out)
