@@ -125,6 +125,15 @@ class TestMembers:
         assert by_redshift.dispersion == pytest.approx(biweight_scale(v), rel=1e-7)  # digits of the redshifts
         assert set(by_velocity.to_dict()) == set(by_velocity.to_table().colnames)
 
+    def test_a_named_column_counts_first(self, tmp_path):
+        v = np.random.default_rng(5).normal(0, 900, 60)
+        redshift = 0.5 + 1.5 * v / 299792.458
+        # Recession velocities stand beside the redshifts that are asked for.
+        rows = "".join(f"{299792.458 * one:.6f},{one:.12f}\n" for one in redshift)
+        (tmp_path / "z.csv").write_text(f"velocity,z\n{rows}")
+        found = read_members(MembersRecord(path=tmp_path / "z.csv", columns={"redshift": "z"}), 0.5)
+        assert found.dispersion == pytest.approx(biweight_scale(v), rel=1e-7)
+
     @pytest.mark.parametrize(
         ("text", "message"),
         [

@@ -367,6 +367,46 @@ def test_deflections_of_another_lens(tmp_path: Path, keys: tuple[str, ...], chan
         fails(record, message)
 
 
+def test_shear_for_another_source(tmp_path: Path) -> None:
+    """The identities know no scale but that of both together: the factor between them is named."""
+    planes = components(PROFILE, GRID)
+    for factor, fits_ in ((2.0, r"0\.5 times"), (0.5, "2 times")):
+        wrong = {**planes, **{key: factor * planes[key] for key in ("shear1", "shear2")}}
+        fails(record_of(write_planes(tmp_path, wrong, GRID)), f"contradict each other; {fits_} the shear would fit")
+
+
+@pytest.mark.parametrize(
+    ("signs", "message"),
+    [
+        ((1, -1), r"have a curl; the signs that would fit are \(\+deflection1, -deflection2\)"),
+        ((-1, 1), r"have a curl; the signs that would fit are \(-deflection1, \+deflection2\)"),
+        ((-1, -1), r"point away from the mass; the signs that would fit are \(-deflection1, -deflection2\)"),
+    ],
+)
+@pytest.mark.parametrize(
+    "grid", [GRID, replace(GRID, flipped=True, stretch=1.3, rotation=-70)], ids=["plain", "turned"]
+)
+def test_wrong_signs_of_deflections_are_named(tmp_path: Path, signs: tuple[int, int], message: str, grid: Grid) -> None:
+    planes = components(PROFILE, grid)
+    for key, sign in zip(DEFLECTIONS, signs, strict=True):
+        planes[key] = sign * planes[key]
+    fails(record_of(write_planes(tmp_path, planes, grid, DEFLECTIONS)), f"gradient of a potential, but {message}")
+
+
+def test_wrong_axes_of_deflections_are_named(tmp_path: Path) -> None:
+    for right, wrong in (("sky", "pixel"), ("pixel", "sky")):
+        planes = write_planes(tmp_path, components(PROFILE, GRID, axes=right), GRID, DEFLECTIONS)
+        assert read_lens_map(record_of(planes, axes=right), SCALES)
+        fails(record_of(planes, axes=wrong), f'have a curl; axes = "{right}" would fit')
+
+
+def test_swapped_deflections(tmp_path: Path) -> None:
+    grid = replace(GRID, rotation=35.0)
+    names = write_planes(tmp_path, components(PROFILE, grid), grid, DEFLECTIONS)
+    swapped = {"deflection1": names["deflection2"], "deflection2": names["deflection1"]}
+    fails(record_of(swapped), "gradient of a potential, but")
+
+
 def test_skewed_pixels_need_sky_axes(record: MapRecord) -> None:
     def skew(header: fits.Header, data: np.ndarray) -> np.ndarray:
         header["PC1_2"] = 0.5

@@ -189,6 +189,18 @@ def test_mirror_image_on_every_grid(lens_map: LensMap) -> None:
     assert offsets_from_sky(CENTRE, ra, dec) == (pytest.approx(x + mirror[0]), pytest.approx(y + mirror[1]))
 
 
+@pytest.mark.parametrize("distance", [0.0, 0.02, 0.3, -0.2])
+def test_nearest_critical_point(lens_map: LensMap, distance: float) -> None:
+    """No vertex of the curve, but its nearest point: as far away as the perpendicular distance says."""
+    point = local_solution(lens_map, sky(3.4 + distance * 0.6, 3.0 + distance * 0.8))
+    assert point.best is not None
+    assert point.critical_point is not None
+    there = np.array(offsets_from_sky(point.position, *point.critical_point))
+    assert np.hypot(*there) == pytest.approx(abs(point.best.critical_distance_perp), abs=1e-6)
+    lam_t, _ = LENSES["ellipsoid in shear"].eigenvalues(*offsets_from_sky(CENTRE, *point.critical_point), scale=RATIO)
+    assert float(lam_t) == pytest.approx(0, abs=1e-6)
+
+
 def test_report_as_dict_and_table(lens_map: LensMap) -> None:
     point = local_solution(lens_map, sky(2.55, 3.2))
     report: dict[str, Any] = point.to_dict()
@@ -209,6 +221,8 @@ def test_place_without_critical_curve(tmp_path: Path) -> None:
     sheet = read_lens_map(rendered(tmp_path, LENSES["shear sheet"], grid), SCALES)
     point = local_solution(sheet, CENTRE)
     assert point.flags[-1] == "no_critical_curve"
+    # What the linear expansion says is not on the map at all.
+    assert (point.linear is not None) == ("not_followed" in point.flags)
     assert point.critical_point is None
     assert point.mapped is None
     assert point.quality.identity_misfit is None  # derivatives are lost in rounding

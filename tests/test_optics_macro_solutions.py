@@ -128,13 +128,25 @@ class TestMaps:
         rendered(tmp_path, lens(5.0), grid)
         assert resolve(event(record))[0].central.lam_t != first.central.lam_t
 
+    def test_kept_until_a_realisation_changes(self, tmp_path):
+        grid = Grid(width=120, height=120)
+        own = rendered(tmp_path, lens(), grid)
+        write_planes(tmp_path, components(lens(5.8), grid), grid, stem="r0_")
+        chart = replace(own, realisations=str(tmp_path / "r?_{plane}.fits"))
+        record = replace(mapped(chart, name="kept"), position=sky(1.5, 1.0))
+        first = resolve(event(record))[0]
+        assert resolve(event(record))[0] is first
+        write_planes(tmp_path, components(lens(6.4), grid), grid, stem="r1_")
+        assert len(resolve(event(record))[0].realisations) == 2
+
     def test_bad_input(self, chart):
         single = replace(chart, realisations=None)
         nowhere = replace(single, planes={**single.planes, "shear1": "/nowhere/g1.fits"})
         with pytest.raises(InputError, match=r"nowhere/g1\.fits"):
             local_lenses(event(mapped(nowhere)))
         with pytest.raises(
-            InputError, match=r"event\.toml: macro\.maps\[0\]: `position_error` must keep the position on"
+            InputError,
+            match=r"event\.toml: macro\.maps\[0\]: `position_error` must keep the position on .* \d+ of 500 drawn",
         ):
             sample_eigenvalues(event(mapped(single, position_error=5.0)), np.random.default_rng(1), 500)
         with pytest.raises(InputError, match=r"event\.toml: macro\.maps\[0\]: must go with the redshifts of lens and"):

@@ -126,7 +126,8 @@ def _place(report: MacroReport) -> list[str]:
             f"{report.einstein_radius_source_au:.0f} au at the source (one solar mass)"
         )
     sides = ", ".join(f"{name} {_share(share)}" for name, share in report.parity_probabilities.items())
-    images = "one image" if report.images == 1 else "the merging pair; lam_t, mu and parity are the minimum's"
+    pair = f"the merging pair; lam_t, mu and parity are the {report.parity}'s"
+    images = "one image" if report.images == 1 else pair
     return [*lines, f"  parity               {report.parity} ({sides}); for {images}"]
 
 

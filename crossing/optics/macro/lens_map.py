@@ -12,6 +12,7 @@ from crossing.errors import InputError
 from crossing.optics.macro.map_checks import (
     Fields,
     MapQuality,
+    check_curl,
     check_deflections,
     check_shear,
     jacobian_of_deflections,
@@ -139,12 +140,13 @@ class LensMap:
         """
         identity = agreement = None
         try:
-            if self.pieces == "shear":
-                raw = [self.planes[key].cutout(rows, columns) for key in _SETS["shear"]]
-                raw = _finite_part(raw)
-                pixel = _axes_or_none(frame)
-                choices = {"pixel": pixel, "sky": np.eye(2)}
-                if raw:
+            if self.pieces != "size of shear":
+                raw = _finite_part([self.planes[key].cutout(rows, columns) for key in _SETS[self.pieces]])
+                choices = {"pixel": _axes_or_none(frame), "sky": np.eye(2)}
+                if raw and self.pieces == "deflection":
+                    first, second = (self.deflection_scale * one for one in raw)
+                    check_curl(first, second, choices, self.axes, frame.inverse)
+                elif raw:
                     identity = check_shear(raw[0], raw[1], raw[2], choices, self.axes, frame.inverse)
             if self.pieces != "deflection" and all(key in self.planes for key in _DEFLECTIONS):
                 inner = _shrink(rows, self.shape[0]), _shrink(columns, self.shape[1])

@@ -13,7 +13,14 @@ from crossing.errors import InputError
 from crossing.optics.macro.grid_lines import Kind, zero_lines
 from crossing.optics.macro.lens_map import LensMap
 from crossing.optics.macro.map_checks import MapQuality
-from crossing.optics.macro.map_fold import FoldSolution, LocalStretch, linear_fold, local_stretch, mapped_fold
+from crossing.optics.macro.map_fold import (
+    FoldSolution,
+    LocalStretch,
+    linear_fold,
+    local_stretch,
+    mapped_fold,
+    nearest_critical,
+)
 from crossing.optics.macro.map_patch import MapPatch
 from crossing.optics.macro.sky_frame import SkyFrame, offsets_from_sky, sky_from_offsets
 
@@ -260,9 +267,9 @@ def local_solution(lens_map: LensMap, position: Sky) -> MapPoint:
     nearest: Sky | None = None
     mapped: FoldSolution | None = None
     if line is None:
-        flags.append("no_critical_curve")
+        flags += ["not_followed"] * (linear is not None) + ["no_critical_curve"]
     else:
-        closest = line[int(np.argmin(np.hypot(*line.T)))]
+        closest = _closest(small, line)
         ra, dec = frame.to_sky(*closest)
         nearest = float(ra), float(dec)
         touching = hypot(*closest) < _TOUCHING * frame.pixel_size
@@ -315,6 +322,15 @@ def _critical_line(lens_map: LensMap, frame: SkyFrame, kind: Kind) -> Array | No
         elif whole:
             return None
         reach *= 3
+
+
+def _closest(patch: MapPatch, line: Array) -> Array:
+    """The critical point that is nearest to the position, the nearest vertex where it lies outside the patch."""
+    vertex = line[int(np.argmin(np.hypot(*line.T)))]
+    found = nearest_critical(patch, vertex[None, :]) if patch.contains(*vertex) else None
+    # Steps of the search that lead to another branch of the curve are not wanted.
+    near = found is not None and hypot(found[0] - vertex[0], found[1] - vertex[1]) < 2 * patch.frame.pixel_size
+    return np.array(found) if near else vertex
 
 
 def _mapped(lens_map: LensMap, position: Sky, here: LocalStretch, line: Array, small: MapPatch) -> FoldSolution | None:

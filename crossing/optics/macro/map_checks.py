@@ -11,7 +11,15 @@ import numpy.typing as npt
 
 from crossing.errors import InputError
 
-__all__ = ["Fields", "MapQuality", "check_deflections", "check_shear", "jacobian_of_deflections", "turn_shear"]
+__all__ = [
+    "Fields",
+    "MapQuality",
+    "check_curl",
+    "check_deflections",
+    "check_shear",
+    "jacobian_of_deflections",
+    "turn_shear",
+]
 
 Array: TypeAlias = npt.NDArray[np.float64]
 
@@ -21,6 +29,9 @@ _MOST_MISFIT: Final = 0.15
 _GOOD_MISFIT: Final = 0.05
 _DEFLECTION_MISFIT: Final = 0.1
 _STEPS: Final = (1, 4)
+# Mass bends light towards itself; a lens may have patches of less than the mean density, but these are shallow.
+_LEAST_KAPPA: Final = -0.05
+_OWN_FACTOR: Final = 0.05
 _LARGEST_KAPPA: Final = 100.0
 _FLOAT32_ROUNDING: Final = 6e-8
 _NOISE_MARGIN: Final = 30.0
@@ -168,6 +179,18 @@ def check_shear(
     ]
     if fitting:
         raise InputError(f"convergence and shear contradict each other; {_advice(fitting, chosen)}")
+    directions = axes[chosen]
+    if directions is not None:
+        own_frame = Fields(kappa, *turn_shear(shear1, shear2, directions))
+        factor = _shear_factor(own_frame, inverse)
+        scaled = _identity_misfit(
+            own_frame._replace(gamma1=factor * own_frame[1], gamma2=factor * own_frame[2]), inverse
+        )
+        if abs(factor - 1) > _OWN_FACTOR and scaled is not None and scaled < min(own / 3, _MOST_MISFIT):
+            raise InputError(
+                f"convergence and shear contradict each other; {factor:.3g} times the shear would fit; check the "
+                "source redshift that each is for"
+            )
     if own > _MOST_MISFIT:
         raise InputError(
             f"convergence and shear must belong to one lens, but their derivatives differ by {own:.0%} whatever the "
@@ -176,19 +199,73 @@ def check_shear(
     return own
 
 
-def _signed(first: int, second: int) -> str:
-    return f"({'-' if first < 0 else '+'}shear1, {'-' if second < 0 else '+'}shear2)"
+def _shear_factor(fields: Fields, inverse: Array) -> float:
+    """What the shear must be multiplied by for its derivatives to be those of the convergence."""
+    (kx, ky), (g1x, g1y), (g2x, g2y) = (_slopes(one, inverse, 1) for one in fields)
+    along, across = g1x + g2y, g2x - g1y
+    below = float(np.median(along**2 + across**2))
+    return float(np.median(kx * along + ky * across)) / below if below > 0 else 1.0
 
 
-def _advice(fitting: list[tuple[str, int, int]], chosen: str) -> str:
-    """What would make the shear fit: other axes with the signs as they are before other signs."""
+def check_curl(
+    deflection1: Array, deflection2: Array, axes: dict[str, Array | None], chosen: str, inverse: Array
+) -> None:
+    """Refuse deflections that no mass can have: they are a gradient, and towards mass.
+
+    Parameters
+    ----------
+    deflection1, deflection2 : ndarray, shape (rows, columns)
+        Along the axes of the choice [arcsec]; all finite.
+    axes, chosen, inverse
+        As for `check_shear`.
+
+    Raises
+    ------
+    InputError
+        If they have a curl, or point away from the mass; the message names the signs, or the axes, that would fit.
+    """
+
+    def curl(choice: str, first: int, second: int) -> tuple[float, float] | None:
+        """Median of the curl over that of the derivatives, and median convergence."""
+        directions = axes[choice]
+        if directions is None:
+            return None
+        (a, b), (c, d) = directions
+        one, two = first * deflection1, second * deflection2
+        (xx, xy), (yx, yy) = (_slopes(part, inverse, 1) for part in (a * one + b * two, c * one + d * two))
+        size = float(np.median(np.sqrt(xx**2 + xy**2 + yx**2 + yy**2)))
+        level = float(np.median(np.hypot(one, two)))
+        if size <= _NOISE_MARGIN * _FLOAT32_ROUNDING * level * float(np.abs(inverse).max()):
+            return None
+        return float(np.median(np.abs(xy - yx))) / size, float(np.median(xx + yy)) / 2
+
+    own = curl(chosen, 1, 1)
+    if own is None or (own[0] < _MOST_MISFIT and own[1] > _LEAST_KAPPA):
+        return
+    others = sorted((choice for choice in axes if choice != chosen), key=str)
+    fitting = []
+    for choice, (first, second) in product([chosen, *others], [(1, 1), (1, -1), (-1, 1), (-1, -1)]):
+        one = curl(choice, first, second)
+        if one is not None and one[0] < _GOOD_MISFIT and one[1] > 0:
+            fitting.append((choice, first, second))
+    problem = "have a curl" if own[0] >= _MOST_MISFIT else "point away from the mass"
+    advice = _advice(fitting, chosen, "deflection") if fitting else "check their signs, axes and order"
+    raise InputError(f"deflections must be the gradient of a potential, but {problem}; {advice}")
+
+
+def _signed(first: int, second: int, what: str) -> str:
+    return f"({'-' if first < 0 else '+'}{what}1, {'-' if second < 0 else '+'}{what}2)"
+
+
+def _advice(fitting: list[tuple[str, int, int]], chosen: str, what: str = "shear") -> str:
+    """What would make the components fit: other axes with the signs as they are before other signs."""
     plain = [f'axes = "{choice}"' for choice, first, second in fitting if (first, second) == (1, 1)]
-    signs = [_signed(first, second) for choice, first, second in fitting if choice == chosen]
+    signs = [_signed(first, second, what) for choice, first, second in fitting if choice == chosen]
     parts = [f"the signs that would fit are {' and '.join(signs)}"] if signs else []
     parts += [f"{' or '.join(plain)} would fit"] if plain else []
     if not parts:
         choice, first, second = fitting[0]
-        parts = [f'axes = "{choice}" with {_signed(first, second)} would fit']
+        parts = [f'axes = "{choice}" with {_signed(first, second, what)} would fit']
     return "; ".join(parts)
 
 

@@ -12,7 +12,7 @@ import numpy.typing as npt
 
 from crossing.optics.macro.map_patch import MapPatch, Stretch
 
-__all__ = ["FoldSolution", "LocalStretch", "linear_fold", "local_stretch", "mapped_fold"]
+__all__ = ["FoldSolution", "LocalStretch", "linear_fold", "local_stretch", "mapped_fold", "nearest_critical"]
 
 Array: TypeAlias = npt.NDArray[np.float64]
 Point: TypeAlias = tuple[float, float]
@@ -143,7 +143,7 @@ def mapped_fold(patch: MapPatch, here: LocalStretch, line: Array) -> FoldSolutio
     FoldSolution or None
         None where the nearest point of the critical curve or of the caustic is not within the patch.
     """
-    nearest, tip = _nearest_critical(patch, line), _nearest_in_source(patch, line)
+    nearest, tip = nearest_critical(patch, line), _nearest_in_source(patch, line)
     if nearest is None or tip is None:
         return None
     along, fold = _critical_along(patch, here), _fold_point(patch, tip)
@@ -215,8 +215,8 @@ def _critical_along(patch: MapPatch, here: LocalStretch) -> float | None:
     return min(found, key=abs) if found else None
 
 
-def _nearest_critical(patch: MapPatch, line: Array) -> Point | None:
-    """The critical point that is nearest to the origin."""
+def nearest_critical(patch: MapPatch, line: Array) -> Point | None:
+    """Critical point nearest to the origin [arcsec], from vertices of the curve; None if it is not in the patch."""
     best = line[np.argmin(np.hypot(*line.T))]
 
     def misfit(c: Array) -> list[float]:

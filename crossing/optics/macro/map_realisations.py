@@ -17,7 +17,15 @@ from crossing.optics.scales import LensScales
 if TYPE_CHECKING:
     from crossing.event.records import MapRecord
 
-__all__ = ["read_realisations"]
+__all__ = ["read_realisations", "realisation_files"]
+
+
+def realisation_files(record: MapRecord) -> list[Path]:
+    """Files that the wildcards of a record name, of all planes, in the order of their names."""
+    if record.realisations is None:
+        return []
+    paths = {split_plane(text)[0] for text in record.planes.values()}
+    return sorted({Path(name) for path in paths for name in glob.glob(_pattern(record.realisations, path))})
 
 
 def read_realisations(record: MapRecord, scales: LensScales) -> Iterator[LensMap]:

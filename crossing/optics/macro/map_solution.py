@@ -90,7 +90,7 @@ class MapSolution:
         if lost.any():
             raise InputError(
                 f"`position_error` must keep the position on the map, got {self.record.position_error:g} arcsec, with "
-                f"{lost.mean():.1%} of the positions off it; give a larger map or a smaller error"
+                f"{lost.sum()} of {size} drawn positions off it; give a larger map or a smaller error"
             )
         return LocalDraws(*out)
 

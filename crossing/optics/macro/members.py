@@ -130,7 +130,9 @@ def read_members(record: MembersRecord, lens_redshift: float) -> MemberDispersio
         table = _read_table(record)
         names = {key: record.columns.get(key, key) for key in _COLUMNS}
         err = _column(table, names["velocity_err"]) if names["velocity_err"] in table.colnames else None
-        if names["velocity"] in table.colnames:
+        # A column that is named counts before one that happens to be there.
+        asked_redshift = "redshift" in record.columns and "velocity" not in record.columns
+        if names["velocity"] in table.colnames and not asked_redshift:
             velocity = _column(table, names["velocity"])
         elif names["redshift"] in table.colnames:
             velocity = _KMS * (_column(table, names["redshift"], "") - lens_redshift) / (1 + lens_redshift)

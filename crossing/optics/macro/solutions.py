@@ -89,9 +89,13 @@ def _solution(event: Event, record: MacroRecord) -> MacroSolution:
 
 def _question(event: Event, record: MacroRecord) -> _Question:
     files = [Path(text.split("[")[0]) for chart in record.maps for text in chart.planes.values()]
+    if any(chart.realisations for chart in record.maps):
+        from crossing.optics.macro.map_realisations import realisation_files
+
+        files += [path for chart in record.maps for path in realisation_files(chart)]
     if record.halo is not None and record.halo.members is not None:
         files.append(record.halo.members.path)
-    states = [(path.stat().st_mtime_ns, path.stat().st_size) if path.exists() else None for path in files]
+    states = [(str(path), path.stat().st_mtime_ns, path.stat().st_size) if path.exists() else None for path in files]
     parts = (record, event.lens_redshift, event.source_redshift, event.cosmology, states)
     return _Question(repr(parts), event, record)
 

@@ -11,7 +11,10 @@ import numpy as np
 from crossing.shooting.compiled import kernel
 from crossing.shooting.tracks.image_curves import quadrature
 
-__all__ = ["add_chord", "backgrounds", "panel_rule", "sum_panel"]
+__all__ = ["RULES", "add_chord", "backgrounds", "panel_rule", "sum_panel"]
+
+RULES = 4
+"""Sums over the chords of a panel: the light, and three that tell its error."""
 
 _STEP, _P, _AREA, _TURN = 0, 1, 5, 8
 
@@ -41,21 +44,55 @@ _FEW = 2
 _ROOTS, _WEIGHTS = np.polynomial.legendre.leggauss(10)
 
 
-def panel_rule(low: float, high: float) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Angles of the chords of a panel, and their weights by Kronrod's and by Gauss's rule.
+def _null_rules() -> np.ndarray:
+    """Rules (3, 15) on the points of Kronrod's rule that are zero for polynomials of degrees up to 13, 12 and 11.
+
+    The first is Kronrod's rule less Gauss's; all have its norm and are orthogonal, so that a light curve's kink which
+    one of them does not see is seen by another (Berntsen & Espelid 1991, ACM TOMS 17, 233).
+    """
+    positive = np.array(_POINTS)
+    gauss = np.zeros(8)
+    gauss[::2] = _GAUSS
+    even = [np.array(_KRONROD) - gauss]
+    # On the positive half, an even rule counts its points twice but for the middle.
+    double = np.array([1.0] + 7 * [2.0])
+    powers = double * positive ** np.arange(0, 11, 2)[:, None]
+    even.append(_orthogonal_to(np.vstack([powers, double * even[0]]), double))
+    odd = np.append(0.0, np.linalg.svd(positive[1:] ** np.arange(1, 12, 2)[:, None])[2][-1])
+    mirror = np.concatenate([np.arange(7, 0, -1), np.arange(8)])
+    side = np.where(np.arange(15) < 7, -1.0, 1.0)
+    rules = np.stack([even[0][mirror], side * odd[mirror], even[1][mirror]])
+    return np.asarray(rules * (np.linalg.norm(rules[0]) / np.linalg.norm(rules, axis=1))[:, None])
+
+
+def _orthogonal_to(rows: np.ndarray, scale: np.ndarray) -> np.ndarray:
+    """The vector that all rows are orthogonal to; the rows are scaled for better numbers."""
+    return np.asarray(np.linalg.svd(rows / np.sqrt(scale))[2][-1] / np.sqrt(scale))
+
+
+_NULL = _null_rules()
+
+
+def panel_rule(low: float, high: float) -> tuple[np.ndarray, np.ndarray]:
+    """Angles of the chords of a panel, and weights of Kronrod's rule and of three that are zero for smooth light.
 
     Parameters
     ----------
     low, high : float
         Ends of the panel; the chord at the angle a is at the distance R sin(a) from the disc's centre.
+
+    Returns
+    -------
+    angles : (15,) ndarray
+        Rising.
+    weights : (15, RULES) ndarray
+        Kronrod's rule, and the null rules, whose largest sum is the error.
     """
     positive = np.array(_POINTS)
     middle, half = 0.5 * (low + high), 0.5 * (high - low)
-    gauss = np.zeros(8)
-    gauss[::2] = _GAUSS
     angles = middle + half * np.concatenate([-positive[:0:-1], positive])
-    mirror = np.concatenate([np.arange(7, 0, -1), np.arange(8)])
-    return angles, half * np.array(_KRONROD)[mirror], half * gauss[mirror]
+    kronrod = np.array(_KRONROD)[np.concatenate([np.arange(7, 0, -1), np.arange(8)])]
+    return angles, half * np.vstack([kronrod, _NULL]).T
 
 
 @kernel
@@ -170,8 +207,8 @@ def _add_inside(along, begin, length, position, half, weight, out, first, last):
         x = t - 1.0
         low = t * (c0 + t * (c1 + t * (c2 + t * (c3 + x * (c4 + x * (c5 + x * c6))))))
         part = abs(high - low)
-        out[0, j] += weight[0] * part
-        out[1, j] += weight[1] * part
+        for rule in range(RULES):
+            out[j, rule] += weight[rule] * part
 
 
 @kernel
@@ -190,12 +227,11 @@ def _add_ends(one, p, area, rising, position, half, darkened, weight, rounded_we
             guess_high, high_slope = _share(p, end - one[_P], guess_high + moved / high_slope)
             t_high = guess_high
         part = abs(_value(area, t_high) - _value(area, t_low))
-        out[0, j] += weight[0] * part
-        out[1, j] += weight[1] * part
+        for rule in range(RULES):
+            out[j, rule] += weight[rule] * part
         if darkened:
             part = _rounded(p, area, t_low, t_high, position[j] - one[_P], half)
-            rounded_out[0, j] += rounded_weight[0] * part
-            rounded_out[1, j] += rounded_weight[1] * part
+            rounded_out[j] += rounded_weight * part
 
 
 @kernel
@@ -214,9 +250,11 @@ def add_chord(nodes, start, stop, position, half, darkened, weight, rounded_weig
         Half the length of the chord.
     darkened : bool
         Whether `rounded_out` is wanted.
-    weight, rounded_weight : (2,) ndarray
-        Factors of the area and of the area weighted with ``sqrt(half^2 - distance^2)``, of two rules.
-    out, rounded_out : (2, m) ndarray
+    weight : (RULES,) ndarray
+        Factors of the area.
+    rounded_weight : float
+        Factor of the area weighted with ``sqrt(half^2 - distance^2)``.
+    out, rounded_out : (m, RULES) and (m,) ndarray
         Added to.
     """
     p, area, along = np.empty(7), np.empty(7), np.empty(7)
@@ -246,11 +284,14 @@ def _mark_restless(nodes, start, stop, position, radius, limit, restless):
     """Mark positions of the disc at which the density of some piece is not the same all over the disc.
 
     The mean over a disc differs from the value in the middle by an eighth of the square of its radius, times the second
-    derivative along the track and as much across.
+    derivative along the track and as much across. Where a curve enters or leaves the box within the disc, it may be in
+    this box on some chords and in the next on others: there both must be summed in the same way.
     """
     p, area, along = np.empty(7), np.empty(7), np.empty(7)
     for i in range(start, stop):
         one = nodes[i]
+        if one[_STEP] == 0.0 or i == start or nodes[i - 1, _STEP] == 0.0:
+            restless[np.searchsorted(position, one[_P] - radius) : np.searchsorted(position, one[_P] + radius)] = True
         if one[_STEP] == 0.0:
             continue
         two = nodes[i + 1]
@@ -284,19 +325,20 @@ def _add_calm(nodes, start, stop, position, half, weight, radius, limit, restles
     calm = np.flatnonzero(~restless)
     if len(calm) == 0:
         return
-    place, middle, unused = position[calm], len(half) // 2, np.zeros((2, 0))
-    density = np.zeros((3, 2, len(calm)))
+    place, middle, unused = position[calm], len(half) // 2, np.zeros(0)
+    density = np.zeros((3, len(calm), RULES))
     chords = (0, middle, len(half) - 1)
     for i in range(3):
-        single = np.array([0.5 / half[chords[i]], 0.0])
         k = chords[i]
-        add_chord(nodes, start[k], stop[k], place, half[k], False, single, single, density[i], unused)
+        single = np.zeros(RULES)
+        single[0] = 0.5 / half[k]
+        add_chord(nodes, start[k], stop[k], place, half[k], False, single, 0.0, density[i], unused)
     share = 2.0 * (weight[:, 0] * half).sum()
     # The same for a disc of the density one whose light is weighted.
     rounded_share = 0.5 * np.pi * (weight[:, 0] * half * half).sum() / radius
     for j in range(len(calm)):
-        value = density[1, 0, j]
-        if abs(0.5 * (density[0, 0, j] + density[2, 0, j]) - value) > 4.0 * limit * value:
+        value = density[1, j, 0]
+        if abs(0.5 * (density[0, j, 0] + density[2, j, 0]) - value) > 4.0 * limit * value:
             restless[calm[j]] = True
             continue
         out[0, calm[j]] += share * value
@@ -308,7 +350,7 @@ def _add_calm(nodes, start, stop, position, half, weight, radius, limit, restles
 def sum_panel(
     nodes, starts, active, position, half, radius, limit, darkened, weight, defects, budget, out, rounded_out, worst
 ):  # fmt: skip
-    """Add a panel of chords, box by box, and the difference of its two rules.
+    """Add a panel of chords, box by box, and what its null rules give.
 
     Parameters
     ----------
@@ -328,15 +370,15 @@ def sum_panel(
         Where the density of a box's images bends by less than this share over the disc, the middle chord stands for it.
     darkened : bool
         Whether `rounded_out` is wanted.
-    weight : (chords, 2) ndarray
-        Factors of the chords' areas by two rules.
+    weight : (chords, RULES) ndarray
+        Factors of the chords' areas.
     defects : tuple of ndarray
         Of `fold_defects`.
     budget : (m,) ndarray
         Error that is allowed at each position.
-    out : (2, m) ndarray
-        Sum, and the difference of the rules, which is of either sign: where a curve wanders out of one box into the
-        next, those of both cancel. Added to.
+    out : (RULES, m) ndarray
+        Light, and the null rules' sums, which are of either sign: where a curve wanders out of one box into the next,
+        those of both cancel. Added to.
     rounded_out : (m,) or (0,) ndarray
         Sum of the chords' areas weighted with ``sqrt(half^2 - distance^2) / radius``. Added to.
     worst : (boxes,) ndarray
@@ -355,21 +397,20 @@ def sum_panel(
         worst[box] = 0.0
         if len(todo) == 0:
             continue
-        part, rounded, place = np.zeros((2, len(todo))), np.zeros((2, len(todo))), position[todo]
+        part, rounded, place = np.zeros((len(todo), RULES)), np.zeros(len(todo)), position[todo]
         for chord in range(len(half)):
             add_chord(nodes, starts[chord, box], starts[chord, box + 1], place, half[chord], darkened,
-                weight[chord], weight[chord] / radius, part, rounded)  # fmt: skip
+                weight[chord], weight[chord, 0] / radius, part, rounded)  # fmt: skip
         begin, index, defect = defects
         for i in range(begin[box], begin[box + 1]):
             slot = np.searchsorted(todo, index[i])
             if slot < len(todo) and todo[slot] == index[i]:
-                part[0, slot] += defect[0, i]
-                part[1, slot] += defect[1, i]
-        worst[box] = (np.abs(part[0] - part[1]) / budget[todo]).max()
-        out[0][todo] += part[0]
-        out[1][todo] += part[0] - part[1]
+                part[slot] += defect[:, i]
+        for i in range(len(todo)):
+            out[:, todo[i]] += part[i]
+            worst[box] = max(worst[box], np.abs(part[i, 1:]).max() / budget[todo[i]])
         if darkened:
-            rounded_out[todo] += rounded[0]
+            rounded_out[todo] += rounded
 
 
 @kernel

@@ -54,8 +54,9 @@ def fold_defects(
         Of `folds_among`, box after box.
     radius : float
         Radius of the disc.
-    distance, half, weight : (chords,), (chords,) and (chords, 2) ndarray
-        Distances of the chords from the middle, their half lengths, and the weights of two rules.
+    distance, half, weight : (chords,), (chords,) and (chords, k) ndarray
+        Distances of the chords from the middle, their half lengths, and the weights of the rules: the first is for
+        the light, the others are zero where it is smooth.
     boxes : int
         Number of boxes.
     place : (n,) ndarray
@@ -65,10 +66,10 @@ def fold_defects(
     -------
     begin : (boxes + 1,) ndarray
         Where the entries of each box begin.
-    index : (k,) ndarray
+    index : (m,) ndarray
         Places.
-    defect : (2, k) ndarray
-        To be added to the sums of the two rules.
+    defect : (k, m) ndarray
+        To be added to the sums of the rules.
     """
     folds = folds[np.abs(folds[:, 4]) < _STEEPEST]
     wide = radius * np.hypot(1.0, folds[:, 4])
@@ -78,7 +79,8 @@ def fold_defects(
     index = np.arange(len(which)) - np.repeat(np.cumsum(count) - count, count) + first[which]
     _, at, side, strength, slope = folds[which].T
     ahead = side * (place[index] - at)
-    defect = np.tile(strength / np.sqrt(wide[which]) * fold_table().uniform(ahead / wide[which]), (2, 1))
+    defect = np.zeros((weight.shape[1], len(which)))
+    defect[0] = strength / np.sqrt(wide[which]) * fold_table().uniform(ahead / wide[which])
     for h, size, shares in zip(distance, half, weight, strict=True):
         beyond = ahead - side * slope * h
         light = 2.0 * strength * (np.sqrt(np.maximum(beyond + size, 0.0)) - np.sqrt(np.maximum(beyond - size, 0.0)))

@@ -19,6 +19,7 @@ from __future__ import annotations
 import numpy as np
 
 from crossing.shooting.compiled import kernel
+from crossing.shooting.tracks.turns import stop_at, turning_share
 from crossing.shooting.tree import RATIO, _find
 
 __all__ = ["COLUMNS", "EXITED", "LOST", "clearance", "follow", "leaf_at", "line_state", "outside", "quadrature"]
@@ -34,6 +35,8 @@ _GOING = -3
 
 _STEP, _P, _AREA, _TURN = 0, 1, 5, 8
 _MOST_CORRECTIONS = 6
+# Shifts below this share of the lengths over which the map bends are made by its derivatives.
+_CLOSE = 4e-3
 _SMALLEST = 1e-12
 _AT_THE_SEAM = 1e-11
 _MOST_STEPS = 1_000_000
@@ -139,10 +142,11 @@ def _node(row, p, z1, z2, z3, big_p, big_q, big_q1, bend):
 
 
 @kernel
-def _correct(z, leaf, h, scene, line, length):
+def _correct(z, leaf, h, scene, line, bends, length):
     """Move a point across the curve until it is on w = h; evaluations, state and shift from the first point.
 
     One leaf's series serves all evaluations: between leaves the map jumps by its error, and there would be no point.
+    The last shift is small enough for the derivatives to give the state behind it.
     """
     first, scale = z, abs(line[2]) + abs(line[3]) + abs(h) + abs(z)
     for count in range(1, _MOST_CORRECTIONS + 1):
@@ -151,11 +155,34 @@ def _correct(z, leaf, h, scene, line, length):
         size = abs(shift)
         if not size < 2.0 * length:
             return count, z, state, 0.0, False
-        # What is left after a shift goes with its square; and where w is flat its rounding is all that is left.
-        if size < 1e-10 * length or size < 1e-15 * abs(z) or abs(h - state[2]) < 1e-15 * scale:
-            return count, z, state, abs(z - first), True
+        bend = max(size * abs(state[4]), size * np.sqrt(abs(state[5] * state[3])))
+        # Where w is flat, rounding is all that is left.
+        if (size < _CLOSE * length and bend < _CLOSE * abs(state[3])) or (
+            size < 1e-15 * abs(z) or abs(h - state[2]) < 1e-15 * scale
+        ):
+            left = 0.5 * (state[4] * shift * shift).imag + 0.25 * bends[0] * size * size
+            shift -= 1j * left / state[3]
+            return count, z + shift, _moved(state, shift, bends), abs(z + shift - first), True
         z += shift
     return _MOST_CORRECTIONS, z, state, abs(z - first), False
+
+
+@kernel
+def _moved(state, shift, bends):
+    """State of the map a small shift away, by its derivatives there."""
+    leaf, p, w, big_g, big_h, big_h1, big_p, big_q, big_q1 = state
+    square, size = 0.5 * shift * shift, 0.25 * abs(shift) ** 2
+    return (
+        leaf,
+        p + (big_p * shift + big_q * square).real + bends[1] * size,
+        w + (big_g * shift + big_h * square).imag + bends[0] * size,
+        big_g + big_h * shift + big_h1 * square + 0.5j * bends[0] * shift.conjugate(),
+        big_h + big_h1 * shift,
+        big_h1,
+        big_p + big_q * shift + big_q1 * square + 0.5 * bends[1] * shift.conjugate(),
+        big_q + big_q1 * shift,
+        big_q1,
+    )
 
 
 @kernel
@@ -173,42 +200,6 @@ def _true_step(guess, ahead, a1, b1, a2, b2, a3, b3):
 
 
 @kernel
-def _hidden_turns(one, two, step):
-    """Whether p turns an even number of times between two nodes, by its interpolated slope."""
-    if one[_P + 1] * two[_P + 1] <= 0.0:
-        return False
-    for part in (0.25, 0.5, 0.75):
-        slope = _hermite_slope(one, two, step, part)
-        if slope * one[_P + 1] <= 0.0:
-            return True
-    return False
-
-
-@kernel
-def _hermite_slope(one, two, step, t):
-    """Slope of p a share t of the step ahead, by the quintic through its first three derivatives at both ends."""
-    a, a1, a2 = one[_P + 1], one[_P + 2] * step, 0.5 * one[_P + 3] * step * step
-    d = two[_P + 1] - a - a1 - a2
-    d1 = two[_P + 2] * step - a1 - 2.0 * a2
-    d2 = 0.5 * two[_P + 3] * step * step - a2
-    c3, c4, c5 = 10.0 * d - 4.0 * d1 + d2, -15.0 * d + 7.0 * d1 - 2.0 * d2, 6.0 * d - 3.0 * d1 + d2
-    return a + t * (a1 + t * (a2 + t * (c3 + t * (c4 + t * c5))))
-
-
-@kernel
-def _turning_share(one, two, step):
-    """Share of the step at which the interpolated slope of p vanishes; it has opposite signs at the ends."""
-    low, high = 0.0, 1.0
-    for _ in range(40):
-        middle = 0.5 * (low + high)
-        if _hermite_slope(one, two, step, middle) * one[_P + 1] > 0.0:
-            low = middle
-        else:
-            high = middle
-    return 0.5 * (low + high)
-
-
-@kernel
 def _set_fold(row, state):
     """Make a node that of a fold, where the gradients of p and w are parallel: their ratio is the caustic's slope."""
     row[_P + 1] = 0.0
@@ -221,7 +212,7 @@ def _to_fold(z, leaf, h, scene, line, bends, row, length):
     """Point of the curve, near z, where p turns; fills the node."""
     count = 0
     for _ in range(8):
-        used, z, state, _, good = _correct(z, leaf, h, scene, line, length)
+        used, z, state, _, good = _correct(z, leaf, h, scene, line, bends, length)
         count += used
         if not good:
             return count, z, state, False
@@ -323,7 +314,7 @@ def _land(z, state, leaf, h, scene, line, bends, box, length):
             break
         step = gap / speed
         moved += step
-        used, z, state, _, good = _correct(z + step * (z1 + 0.5 * step * z2), leaf, h, scene, line, length)
+        used, z, state, _, good = _correct(z + step * (z1 + 0.5 * step * z2), leaf, h, scene, line, bends, length)
         count += used
         if not good:
             break
@@ -331,10 +322,29 @@ def _land(z, state, leaf, h, scene, line, bends, box, length):
 
 
 @kernel
+def _arrive(ahead, state, leaf, h, scene, line, bends, box, length, allowed):
+    """Put a predicted point on the curve; or, if the curve leaves the box before, the point where it does."""
+    if leaf < 0:
+        return 0, ahead, state, 0.0, False, False
+    used, ahead, state, miss, good = _correct(ahead, leaf, h, scene, line, bends, length)
+    if not (good and miss < allowed * length and outside(ahead, box)):
+        return used, ahead, state, 0.0, False, good and miss < allowed * length
+    more, ahead, state, moved, good = _land(ahead, state, leaf, h, scene, line, bends, box, length)
+    # Further on is where it comes back.
+    return used + more, ahead, state, moved, True, good and moved <= 0.0
+
+
+@kernel
 def _reach(z, scene, leaf, a1, a2, a3):
     """Step at which the curve's series stops converging, about."""
     reach = min(2.0 * abs(a1) / max(abs(a2), 1e-300), np.sqrt(6.0 * abs(a1) / max(abs(a3), 1e-300)))
     return min(reach, 2.0 * clearance(z, scene, leaf) / abs(a1))
+
+
+@kernel
+def _longest(step, reach, pace, a1, a4):
+    """Longest next step: by the reach, the step before, and the fourth derivative as it was there."""
+    return min(pace * reach, 2.0 * step, (4.0 * pace * abs(a1) / max(abs(a4), 1e-300)) ** (1.0 / 3.0))
 
 
 @kernel
@@ -382,15 +392,13 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
     leaf = leaf_at(z, scene)
     if leaf < 0:
         return count, LOST, z, 0
-    total, z, state, _, good = _correct(z, leaf, h, scene, line, length)
-    if not good:
-        return count, LOST, z, total
-    if outside(z, box):  # of a star next to the edge
-        return count, EXITED, z, total
+    total, z, state, _, good = _correct(z, leaf, h, scene, line, bends, length)
+    if not good or outside(z, box):  # of a star next to the edge
+        return count, EXITED if good else LOST, z, total
     a1, a2, a3 = _derivatives(state[3], state[4], state[5], bends[0])
     _node(here, state[1], a1, a2, a3, state[6], state[7], state[8], bends[1])
     g_here = state[3]
-    step, reach, beside, running, tries = np.inf, 0.0, False, False, 0
+    step, reach, beside, running, tries, a4 = np.inf, 0.0, False, False, 0, 0j
     end = _ending(z, here[_P], here[_P + 1], scene, leaf, ends, limits[0], box)
     for _ in range(_MOST_STEPS):
         if end != _GOING:
@@ -398,38 +406,40 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
         if tries == 0:
             beside = here[_P] < limits[0] or here[_P] > limits[1]
             reach = _reach(z, scene, leaf, a1, a2, a3)
-            step = min((1.5 if beside else 1.0) * pace * reach, 2.0 * step)
+            step = _longest(step, (1.5 if beside else 1.0) * reach, pace, a1, a4)
         length = abs(a1) * step
         if tries > _MOST_TRIES or not length > _SMALLEST * (abs(z) + 1e-3):
             return count, LOST, z, total
         tries += 1
-        ahead = z + step * (a1 + step * (0.5 * a2 + step / 6.0 * a3))
-        leaf_ahead, used, good, leaving = leaf_at(ahead, scene), 0, False, False
-        if leaf_ahead >= 0:
-            used, ahead, state, miss, good = _correct(ahead, leaf_ahead, h, scene, line, length)
-            good = good and miss < 0.1 * pace * length
-            leaving, guess = good and outside(ahead, box), step
-            if leaving:
-                more, ahead, state, moved, good = _land(ahead, state, leaf_ahead, h, scene, line, bends, box, length)
-                used, guess = used + more, step + moved
-        total += used
+        ahead = z + step * (a1 + step * (0.5 * a2 + step / 6.0 * (a3 + 0.25 * step * a4)))
+        leaf_ahead = leaf_at(ahead, scene)
+        used, ahead, state, moved, leaving, good = _arrive(
+            ahead, state, leaf_ahead, h, scene, line, bends, box, length, 0.1 * pace
+        )
+        total, guess = total + used, step + moved
         if not good or (state[3] * g_here.conjugate()).real < 0.5 * abs(state[3]) * abs(g_here):
             step *= 0.5
             continue
         b1, b2, b3 = _derivatives(state[3], state[4], state[5], bends[0])
-        if length > _AT_THE_SEAM * (1.0 + abs(z)) and not leaving and _leaves_between(z, a1, ahead, b1, step, box):
+        seam = length <= _AT_THE_SEAM * (1.0 + abs(z))
+        if not seam and not leaving and _leaves_between(z, a1, ahead, b1, step, box):
             step *= 0.5
             continue
         true = _true_step(guess, ahead - z, a1, b1, a2, b2, a3, b3)
         _node(there, state[1], b1, b2, b3, state[6], state[7], state[8], bends[1])
-        if not abs(true - guess) < 0.1 * pace * guess or _hidden_turns(here, there, true):
+        if not (abs(true - guess) < 0.1 * pace * guess and abs(b3 - a3) * true**3 < 4.8 * pace * length):
             step *= 0.5
+            continue
+        share = stop_at(here, there, true)
+        if share < 1.0 and not seam:
+            # Too close to an end it would be met again.
+            step = share * true if 0.02 < share < 0.98 else 0.5 * step
             continue
         if beside and step > pace * reach and _touches(here, there, limits):
             step = pace * reach
             continue
         if here[_P + 1] * there[_P + 1] < 0.0:
-            share = _turning_share(here, there, true)
+            share = turning_share(here, there, true)
             middle = z + share * true * (a1 + share * true * (0.5 * a2 + share * true / 6.0 * a3))
             used, middle, state_f, good = _to_fold(middle, leaf, h, scene, line, bends, fold, length)
             total += used
@@ -439,7 +449,7 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
             if good and 0.0 < before < true and 0.0 < after < true:
                 count, running = _keep(nodes, count, room, here, fold, before, limits, running)
                 count, running = _keep(nodes, count, room, fold, there, after, limits, running)
-            elif length > _AT_THE_SEAM * (1.0 + abs(z)):
+            elif not seam:
                 step *= 0.5
                 continue
             else:
@@ -449,7 +459,8 @@ def follow(z, length, h, scene, line, bends, ends, limits, box, pace, nodes, cou
         else:
             count, running = _keep(nodes, count, room, here, there, true, limits, running)
         here[:] = there
-        z, a1, a2, a3, g_here, leaf, step, tries = ahead, b1, b2, b3, state[3], leaf_ahead, true, 0
+        a4, a3, g_here, tries = (b3 - a3) / true, b3, state[3], 0
+        z, a1, a2, leaf, step = ahead, b1, b2, leaf_ahead, true
         end = EXITED if leaving else _ending(z, here[_P], here[_P + 1], scene, leaf, ends, limits[0], box)
     if running and count < room:
         nodes[count] = here

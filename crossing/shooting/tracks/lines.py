@@ -13,10 +13,12 @@ __all__ = ["edge_roots", "star_backgrounds", "trace_boxes"]
 # Along an edge, steps are this share of the distance to where the line can be, and not below the floor.
 _EDGE_SHARE = 0.2
 _EDGE_FLOOR = 1e-4
+_EDGE_CLOSE = 1e-10
 _MOST_ROOTS = 4096
 _MOST_TRIES = 4
 # Curves leave a box where the edges say, to this share of the distance from the origin.
 _SAME_EXIT = 1e-3
+_SAME_PLACE = 1e-7
 
 
 @kernel
@@ -89,7 +91,7 @@ def edge_roots(start, stop, h, scene, line, floor, found, inward):
         used += 1
         gap = state[2] - h
         if gap * before < 0.0:
-            more, z, slope = _edge_root(start, along, before_at, at, before, h, scene, line)
+            more, z, slope = _edge_root(start, along, before_at, at, before, gap, h, scene, line)
             used += more
             if roots < len(found):
                 found[roots], inward[roots] = z, ((1j * along).conjugate() / slope).real > 0.0
@@ -97,21 +99,23 @@ def edge_roots(start, stop, h, scene, line, floor, found, inward):
         if at >= length:
             return roots, used
         before_at, before = at, gap
-        reach = min(abs(gap) / abs(state[3]), 2.0 * abs(state[3]) / max(abs(state[4]), 1e-300))
+        bend = max(abs(state[4]), 1e-300)
+        reach = min(abs(gap) / abs(state[3]), 2.0 * abs(state[3]) / bend)
+        # Where w rises or falls along the edge, and will for a while, no two roots lie side by side.
+        reach = max(reach, abs((state[3] * along).imag) / bend)
         # A star beside the edge makes a peak that is not seen from afar.
         reach = min(reach, 2.0 * clearance(z, scene, leaf))
         at = min(length, at + max(_EDGE_SHARE * reach, floor))
 
 
 @kernel
-def _edge_root(start, along, low, high, low_gap, h, scene, line):
-    """Root between two points of an edge, by Newton's method kept between them; G there."""
-    at, used = 0.5 * (low + high), 0
-    leaf = leaf_at(start + at * along, scene)
-    state = line_state(start.real, start.imag, leaf, scene, line)
+def _edge_root(start, along, low, high, low_gap, high_gap, h, scene, line):
+    """Root between two points of an edge, by Newton's method kept between them; evaluations, the point, and G there."""
+    at, used = low + (high - low) * low_gap / (low_gap - high_gap), 0
+    z, state = start, line_state(start.real, start.imag, leaf_at(start, scene), scene, line)
     for _ in range(80):
         z = start + at * along
-        state = line_state(z.real, z.imag, leaf, scene, line)
+        state = line_state(z.real, z.imag, leaf_at(z, scene), scene, line)
         used += 1
         gap = state[2] - h
         if gap * low_gap > 0.0:
@@ -121,12 +125,11 @@ def _edge_root(start, along, low, high, low_gap, h, scene, line):
         # The gradient of w is i conj(G).
         slope = (1j * state[3].conjugate() * along.conjugate()).real
         new = at - gap / slope if slope != 0.0 else low
-        if not low < new < high:
-            new = 0.5 * (low + high)
-        if abs(new - at) < 1e-14 * (1.0 + abs(z)):
-            break
-        at = new
-    return used, start + at * along, state[3]
+        # What is left after a step goes with its square.
+        if abs(new - at) < _EDGE_CLOSE * (1.0 + abs(z)):
+            return used, start + new * along, state[3]
+        at = new if low < new < high else 0.5 * (low + high)
+    return used, z, state[3]
 
 
 @kernel
@@ -150,6 +153,19 @@ def _start(star, h, scene, line, ends, limits, box):
             break
         behind -= 1.2 * short + 1e-9 * abs(behind)
     return z, 0.3 * abs(z - place), used
+
+
+@kernel
+def _begins(z, stars, begun, scene, line, ends):
+    """Whether a curve that comes in is one of a star of the box, before the point from which it is followed."""
+    star_x, star_y, star_mass = scene[5]
+    for k in range(len(stars)):
+        offset = z - complex(star_x[stars[k]], star_y[stars[k]])
+        before = abs(offset) < abs(begun[k] - z + offset)
+        if before and star_mass[stars[k]] >= abs(offset) * ends[stars[k], 3]:
+            # The pole alone says on which side of the star that is.
+            return (complex(line[0], line[1]) * offset.conjugate()).real < 0.0
+    return False
 
 
 @kernel
@@ -202,23 +218,28 @@ def trace_boxes(which, boxes, order, begin, h, scene, line, bends, ends, limits,
     room, count, total, faults = 2000 + 100 * len(which), 0, 0, 0
     nodes = np.empty((room, COLUMNS))
     starts = np.zeros(len(which) + 1, dtype=np.int64)
-    visits = np.zeros(len(scene[5][0]), dtype=np.int64)
+    visits, ended = np.zeros(len(scene[5][0]), dtype=np.int64), np.empty(_MOST_ROOTS, dtype=np.int64)
     for i in range(len(which)):
         box, stars = boxes[which[i]], order[begin[which[i]] : begin[which[i] + 1]]
+        begun = np.empty(len(stars), dtype=np.complex128)
         entries, exits = np.empty(_MOST_ROOTS, dtype=np.complex128), np.empty(_MOST_ROOTS, dtype=np.complex128)
         finer, complete, first = 1.0, False, count
         for _ in range(_MOST_TRIES):
             count = first
             into, out, used = _box_entries(box, h, scene, line, _EDGE_FLOOR * finer**3, _MOST_ROOTS, entries, exits)
             total += used
-            gone, lost, met = 0, 0, np.zeros(min(out, _MOST_ROOTS), dtype=np.bool_)
+            gone, lost, cut, skipped, met = 0, 0, 0, 0, np.zeros(min(out, _MOST_ROOTS), dtype=np.bool_)
             visits[stars] = 0
             for curve in range(len(stars) + into):
                 if curve < len(stars):
                     z, length, used = _start(stars[curve], h, scene, line, ends, limits, box)
+                    begun[curve] = z
                     total += used
                 else:
                     z, length = entries[curve - len(stars)], 1.0
+                    if _begins(z, stars, begun, scene, line, ends):
+                        skipped += 1
+                        continue
                 while True:
                     reached, end, z_end, used = follow(
                         z, length, h, scene, line, bends, ends, limits, box, pace * finer, nodes, count, room
@@ -230,7 +251,10 @@ def trace_boxes(which, boxes, order, begin, h, scene, line, bends, ends, limits,
                     bigger[:count] = nodes[:count]
                     nodes, room = bigger, 2 * room
                 count = reached
-                if end >= 0:
+                if end >= 0 and curve >= len(stars) and abs(z_end - z) < _SAME_PLACE * (1.0 + abs(z)):
+                    ended[cut] = end
+                    cut += 1
+                elif end >= 0:
                     visits[end] += 1
                 elif end == EXITED:
                     gone += 1
@@ -240,7 +264,12 @@ def trace_boxes(which, boxes, order, begin, h, scene, line, bends, ends, limits,
                             met[nearest] = True
                 else:
                     lost += 1
-            complete = bool(lost == 0 and gone == out and met.all() and (visits[stars] == 1).all())
+            twice = skipped
+            for star in ended[:cut]:
+                twice += min(visits[star], 1)
+                visits[star] = 1
+            # A star's curve that is given up inside, or taken up there, may cross the edge where it is not followed.
+            complete = bool(lost == 0 and gone + twice == out and (~met).sum() <= twice and (visits[stars] == 1).all())
             if complete:
                 break
             finer *= 0.5

@@ -67,7 +67,7 @@ class Panel:
     half: Array
     """(chords,) half lengths."""
     weight: Array
-    """(chords, 2) weights of the two rules, such that areas sum to a mean over the disc."""
+    """(chords, RULES) weights, such that areas sum to a mean over the disc; see `panel_rule`."""
     distance: Array
     """(chords,) distances from the disc's centre."""
     folds: Array
@@ -142,7 +142,7 @@ class TrackScene:
 
     def panel(self, radius: float, low: float, high: float, boxes: NDArray[np.int64]) -> tuple[Panel, int, int]:
         """Chords of a disc between two angles; with the evaluations and the faults."""
-        angle, kronrod, gauss = panel_rule(low, high)
+        angle, rules = panel_rule(low, high)
         chords = self.chords(radius * np.sin(angle), boxes)
         offset = np.cumsum([0] + [len(chord.nodes) for chord in chords])[:-1]
         half = radius * np.cos(angle)
@@ -158,7 +158,7 @@ class TrackScene:
             nodes=np.concatenate([chord.nodes for chord in chords]),
             starts=np.array([chord.starts + first for chord, first in zip(chords, offset, strict=True)]),
             half=half,
-            weight=np.stack([kronrod, gauss], axis=1) * (half / (np.pi * radius**2))[:, None],
+            weight=rules * (half / (np.pi * radius**2))[:, None],
         )
         return panel, sum(chord.evaluations for chord in chords), sum(chord.faults for chord in chords)
 
