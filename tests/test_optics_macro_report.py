@@ -191,6 +191,16 @@ def test_on_the_critical_curve_the_magnification_is_null_and_flagged(tmp_path: P
     assert found.critical_distance.median == 0.0
 
 
+@pytest.mark.parametrize(
+    ("lam_t", "flags"), [(2e-6, ("on_critical_curve",)), (-2e-6, ("on_critical_curve",)), (2e-5, ())]
+)
+def test_next_to_the_critical_curve_the_magnification_is_flagged(
+    tmp_path: Path, lam_t: float, flags: tuple[str, ...]
+) -> None:
+    found = report(tmp_path, f"[macro]\nmu_t = {1 / lam_t!r}\nmu_r = 2\n")
+    assert found.flags == flags
+
+
 def test_the_spread_is_in_lam_t_and_passes_through_zero(tmp_path: Path) -> None:
     found = report(
         tmp_path,

@@ -37,6 +37,8 @@ __all__ = ["default_redshifts", "describe_macro"]
 Array: TypeAlias = npt.NDArray[np.float64]
 Sky: TypeAlias = tuple[float, float]
 
+# No lens model tells lam_t more precisely.
+_ON_THE_CURVE: Final = 1e-5
 _LIKELY_OTHER: Final = 0.05
 _DISAGREE: Final = 0.2
 _MOST_REDSHIFTS: Final = 20
@@ -322,6 +324,8 @@ def _pooled(models: Sequence[ModelReport], scales: LensScales | None) -> dict[st
         values |= _pooled_places(models, values, draws, weight)
     if values["mu"] is None or values["mu"].bound != "two-sided":
         flags.insert(0, "mu_diverges")
+    elif abs(values["lam_t"].median) < _ON_THE_CURVE:
+        flags.insert(0, "on_critical_curve")
     elif len([share for share in values["parity_probabilities"].values() if share > _LIKELY_OTHER]) > 1:
         notes.append("both_sides")
     if _disagree(models):

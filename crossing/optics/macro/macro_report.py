@@ -33,6 +33,7 @@ _ALL: Final = {**SOLUTION_FLAGS, **POINT_FLAGS}
 FLAGS: Final[dict[str, str]] = {
     "mu_diverges": "the event may lie on either side of the critical curve: lam_t passes through zero within its 68%, "
     "so that the magnification has a lower limit only, and no sign",
+    "on_critical_curve": "lam_t is zero to the precision of any lens model, 1e-5: the magnification is not to be used",
     **{name: text for name, text in _ALL.items() if name in _UNTRUSTED},
 }
 """Flags that make a report untrustworthy, with what they mean."""
