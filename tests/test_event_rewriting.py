@@ -33,7 +33,9 @@ def test_everything_comes_back(data: dict[str, Any]) -> None:
     assert tomllib.loads(toml_text(data)) == data
 
 
-@pytest.mark.parametrize("path", sorted(DEMO.glob("*.toml")), ids=lambda path: path.stem)
+@pytest.mark.parametrize(
+    "path", sorted(set(DEMO.glob("*.toml")) - {DEMO / "campaign.toml"}), ids=lambda path: path.stem
+)
 def test_demo_events_keep_all_but_name_and_photometry(path: Path, tmp_path: Path) -> None:
     copy = tmp_path / "copy.toml"
     copy.write_text(rewritten_event(path, suffix=" (2)", photometry=NEW, comment=["one\nline"]))
