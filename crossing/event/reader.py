@@ -73,7 +73,7 @@ def build_event(root: Table, sha256: str) -> Event:
     """
     for key in root:
         if key in _CAMPAIGN_SECTIONS:
-            raise root.error("belongs in a campaign file; give this file to `crossing rates` or `crossing plan`", key)
+            raise root.error("belongs in a campaign file; give this file to `crossing rates`", key)
     root.only(*_SECTIONS)
     name, mode = read_header(root)
     event = Event(
